@@ -45,7 +45,7 @@ enum windrow_status windrow_fail_within(enum windrow_status status, const char *
     int written = vsnprintf(text, sizeof text, format, arguments);
     va_end(arguments);
     size_t used = written < 0 ? 0 : (size_t)written < sizeof text ? (size_t)written : sizeof text - 1;
-    snprintf(text + used, sizeof text - used, ": %s", message);
+    snprintf(text + used, sizeof text - used, ": %.*s", (int)(sizeof text - 4), message);
     memcpy(message, text, sizeof message);
     return status;
 }
