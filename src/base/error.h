@@ -11,17 +11,7 @@
 #ifndef WINDROW_BASE_ERROR_H
 #define WINDROW_BASE_ERROR_H
 
-/* Every outcome of the library; the values are the program's exit codes. */
-enum windrow_status {
-    WINDROW_OK = 0,       /* done */
-    WINDROW_NO = 1,       /* the answer to the question is no: damage found, URL unknown, not ranked yet */
-    WINDROW_USAGE = 2,    /* the call or the command line makes no sense */
-    WINDROW_INPUT = 3,    /* the input cannot be used */
-    WINDROW_DAMAGED = 4,  /* a store or a ledger is damaged */
-    WINDROW_RESOURCE = 5, /* out of disk, memory budget, or another resource */
-    WINDROW_STOPPED = 6,  /* stopped at a checkpoint by request; run again to go on */
-    WINDROW_BUG = 70      /* our own bug */
-};
+#include "windrow.h"
 
 /* Longest message kept, terminator included; longer texts are cut. */
 #define WINDROW_MESSAGE_BYTES 2048
@@ -38,9 +28,6 @@ enum windrow_status windrow_fail_system(enum windrow_status status, int error_nu
 /* Puts context and ": " in front of this thread's message; returns `status` unchanged. */
 enum windrow_status windrow_fail_within(enum windrow_status status, const char *format, ...)
     __attribute__((format(printf, 2, 3)));
-
-/* This thread's message, "" when there was no failure. Valid until the thread's next failure. */
-const char *windrow_message(void);
 
 /* Replaces this thread's message by a copy of `text`: how the crew hands a message over. */
 void windrow_message_set(const char *text);

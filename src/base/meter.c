@@ -10,12 +10,9 @@ double windrow_seconds(void)
     return (double)now.tv_sec + 1e-9 * (double)now.tv_nsec;
 }
 
-void windrow_meter_start(struct windrow_meter *meter, windrow_listener listener, void *context, double interval_seconds, atomic_bool *stop)
+void windrow_meter_start(struct windrow_meter *meter, const struct windrow_watch *watch)
 {
-    meter->listener = listener;
-    meter->context = context;
-    meter->interval_seconds = interval_seconds;
-    meter->stop = stop;
+    meter->watch = *watch;
     meter->now = (struct windrow_progress){.error_l1 = -1, .seconds_left = -1};
     atomic_store(&meter->done, 0);
     atomic_store(&meter->next_call, 0);
@@ -35,7 +32,7 @@ void windrow_meter_stage(struct windrow_meter *meter, const char *stage, const c
     meter->now.seconds_left = -1;
     meter->stage_began = windrow_seconds();
     atomic_store(&meter->done, 0);
-    atomic_store(&meter->next_call, meter->stage_began + meter->interval_seconds);
+    atomic_store(&meter->next_call, meter->stage_began + meter->watch.interval_seconds);
 }
 
 static void call(struct windrow_meter *meter, double time, bool ended)
@@ -48,29 +45,29 @@ static void call(struct windrow_meter *meter, double time, bool ended)
     if (progress.seconds_left < 0 && progress.total && progress.rate > 0 && progress.done <= progress.total)
         progress.seconds_left = (double)(progress.total - progress.done) / progress.rate;
     progress.stage_ended = ended;
-    meter->listener(meter->context, &progress);
+    meter->watch.listener(meter->watch.context, &progress);
 }
 
 void windrow_meter_add(struct windrow_meter *meter, uint64_t units)
 {
     atomic_fetch_add(&meter->done, units);
-    if (!meter->listener)
+    if (!meter->watch.listener)
         return;
     double time = windrow_seconds();
     if (time < atomic_load(&meter->next_call) || pthread_mutex_trylock(&meter->lock))
         return;
-    atomic_store(&meter->next_call, time + meter->interval_seconds);
+    atomic_store(&meter->next_call, time + meter->watch.interval_seconds);
     call(meter, time, false);
     pthread_mutex_unlock(&meter->lock);
 }
 
 void windrow_meter_stage_end(struct windrow_meter *meter)
 {
-    if (meter->listener)
+    if (meter->watch.listener)
         call(meter, windrow_seconds(), true);
 }
 
 bool windrow_meter_stopping(const struct windrow_meter *meter)
 {
-    return meter->stop && atomic_load(meter->stop);
+    return meter->watch.stop && atomic_load(meter->watch.stop);
 }

@@ -7,32 +7,12 @@
 #ifndef WINDROW_BASE_METER_H
 #define WINDROW_BASE_METER_H
 
+#include "windrow.h"
+
 #include <pthread.h>
-#include <stdatomic.h>
-#include <stdbool.h>
-#include <stdint.h>
-
-struct windrow_progress {
-    const char *stage;       /* what is being done: "reading dumps", "sweep", … */
-    const char *unit;        /* what done and total count: "links", "bytes", "segments" */
-    uint64_t done;
-    uint64_t total;          /* 0 when nobody can know */
-    double elapsed_seconds;  /* since the stage began */
-    double rate;             /* units a second since the stage began */
-    double seconds_left;     /* of the whole job where it can be told, else of the stage; negative when unknown */
-    double share;            /* 0…1 of the stage, negative when unknown */
-    double error_l1;         /* rank: the error so far, negative when there is none yet */
-    uint64_t sweep;          /* rank: the sweep going on, from 1 */
-    bool stage_ended;        /* the last call of a stage */
-};
-
-typedef void (*windrow_listener)(void *context, const struct windrow_progress *progress);
 
 struct windrow_meter {
-    windrow_listener listener; /* NULL: nobody listens */
-    void *context;
-    double interval_seconds;
-    atomic_bool *stop;         /* raised to ask the job to stop at its next checkpoint; NULL: never */
+    struct windrow_watch watch;
 
     struct windrow_progress now; /* sweep, error_l1 and seconds_left may be set by the job between counts */
     atomic_uint_fast64_t done;
@@ -41,7 +21,7 @@ struct windrow_meter {
     pthread_mutex_t lock;
 };
 
-void windrow_meter_start(struct windrow_meter *meter, windrow_listener listener, void *context, double interval_seconds, atomic_bool *stop);
+void windrow_meter_start(struct windrow_meter *meter, const struct windrow_watch *watch);
 void windrow_meter_finish(struct windrow_meter *meter);
 /* Begins a stage of `total` units (0: unknown); strings must outlive the stage. */
 void windrow_meter_stage(struct windrow_meter *meter, const char *stage, const char *unit, uint64_t total);
