@@ -1,0 +1,408 @@
+#include "shard/batch.h"
+
+#include "shard/keyrun.h"
+#include "shard/linkrun.h"
+#include "shard/sort.h"
+
+#include <stdlib.h>
+#include <string.h>
+#include <xxhash.h>
+
+/* What a batch keeps in memory:
+ *
+ *   arena    records of keys, each at a multiple of 8 bytes: local id (4), key bytes (4), the key
+ *   places   local id -> arena place / 8
+ *   slots    hash table: upper half of the hash, arena place / 8 + 1 (0: free)
+ *   lines    source, number of targets, targets … as local ids
+ *
+ * and while it is written, per page a sort item (16), its new id (4), its out-degree (4) and where its
+ * in-links begin (4); per line a start (8); per link its source (4). */
+struct slot {
+    uint32_t tag;
+    uint32_t place;
+};
+
+#define WAITING 64 /* targets looked up together, so that their cache misses overlap */
+
+struct windrow_batch {
+    uint64_t memory_bytes;
+    uint8_t *arena;
+    size_t arena_bytes, arena_capacity;
+    uint32_t *places;
+    uint8_t *crawled;          /* a byte a page */
+    size_t page_count, page_capacity;
+    struct slot *slots;
+    size_t slot_count;         /* a power of two */
+    size_t page_limit;         /* the slots' fill limit */
+    uint32_t *lines;
+    size_t line_words, line_capacity;
+    size_t line_count;
+    size_t link_count;
+
+    size_t open_line;          /* index in lines of the current source; SIZE_MAX: none */
+    struct windrow_buffer waiting_keys;
+    uint64_t waiting_hash[WAITING];
+    uint32_t waiting_at[WAITING], waiting_bytes[WAITING];
+    size_t waiting;
+};
+
+static const uint8_t *record_key(const struct windrow_batch *batch, uint32_t place)
+{
+    return batch->arena + (size_t)place * 8 + 8;
+}
+
+static uint32_t record_word(const struct windrow_batch *batch, uint32_t place, unsigned word)
+{
+    uint32_t value;
+    memcpy(&value, batch->arena + (size_t)place * 8 + 4 * word, 4);
+    return value;
+}
+
+/* Bytes that filling and writing take with the current contents. */
+static uint64_t memory_in_use(const struct windrow_batch *batch)
+{
+    return batch->arena_bytes + batch->slot_count * sizeof(struct slot) + (uint64_t)batch->page_count * (4 + 1 + 16 + 4 + 4 + 4) +
+           (uint64_t)batch->line_words * 4 + (uint64_t)batch->link_count * 4 + (uint64_t)batch->line_count * 8;
+}
+
+enum windrow_status windrow_batch_create(uint64_t memory_bytes, struct windrow_batch **out)
+{
+    *out = NULL;
+    struct windrow_batch *batch = calloc(1, sizeof *batch);
+    if (!batch)
+        return windrow_fail(WINDROW_RESOURCE, "out of memory for a batch");
+    batch->memory_bytes = memory_bytes;
+    batch->open_line = SIZE_MAX;
+    /* A page takes some 200 bytes with its links and sorting: slots for twice as many. */
+    batch->slot_count = 1024;
+    while (batch->slot_count * 160 < memory_bytes && batch->slot_count < ((size_t)1 << 31))
+        batch->slot_count *= 2;
+    batch->page_limit = batch->slot_count / 4 * 3;
+    batch->slots = calloc(batch->slot_count, sizeof *batch->slots);
+    if (!batch->slots) {
+        windrow_batch_destroy(batch);
+        return windrow_fail(WINDROW_RESOURCE, "out of memory for a batch of %llu bytes; try a smaller --memory", (unsigned long long)memory_bytes);
+    }
+    *out = batch;
+    return WINDROW_OK;
+}
+
+void windrow_batch_destroy(struct windrow_batch *batch)
+{
+    if (!batch)
+        return;
+    free(batch->arena);
+    free(batch->places);
+    free(batch->crawled);
+    free(batch->slots);
+    free(batch->lines);
+    windrow_buffer_free(&batch->waiting_keys);
+    free(batch);
+}
+
+bool windrow_batch_full(const struct windrow_batch *batch)
+{
+    return memory_in_use(batch) >= batch->memory_bytes || batch->page_count >= batch->page_limit - batch->slot_count / 16;
+}
+
+bool windrow_batch_empty(const struct windrow_batch *batch)
+{
+    return batch->page_count == 0;
+}
+
+static enum windrow_status grow(void *array, size_t *capacity, size_t wanted, size_t item_bytes)
+{
+    if (wanted <= *capacity)
+        return WINDROW_OK;
+    size_t larger = *capacity + *capacity / 4 + 4096;
+    if (larger < wanted)
+        larger = wanted;
+    /* Large blocks move by remapping, without a copy beside them. */
+    void *moved = realloc(*(void **)array, larger * item_bytes);
+    if (!moved)
+        return windrow_fail(WINDROW_RESOURCE, "out of memory while filling a batch; try a smaller --memory");
+    *(void **)array = moved;
+    *capacity = larger;
+    return WINDROW_OK;
+}
+
+static enum windrow_status rehash(struct windrow_batch *batch)
+{
+    /* Only when a single line holds more pages than the batch was planned for. */
+    size_t count = batch->slot_count * 2;
+    struct slot *slots = calloc(count, sizeof *slots);
+    if (!slots)
+        return windrow_fail(WINDROW_RESOURCE, "out of memory while filling a batch; try a smaller --memory");
+    for (size_t page = 0; page < batch->page_count; page++) {
+        uint32_t place = batch->places[page];
+        uint64_t hash = XXH3_64bits(record_key(batch, place), record_word(batch, place, 1));
+        size_t at = hash & (count - 1);
+        while (slots[at].place)
+            at = (at + 1) & (count - 1);
+        slots[at] = (struct slot){(uint32_t)(hash >> 32), place + 1};
+    }
+    free(batch->slots);
+    batch->slots = slots;
+    batch->slot_count = count;
+    batch->page_limit = count / 4 * 3;
+    return WINDROW_OK;
+}
+
+static enum windrow_status find_or_add(struct windrow_batch *batch, const char *key, size_t key_bytes, uint64_t hash, uint32_t *id)
+{
+    uint32_t tag = (uint32_t)(hash >> 32);
+    size_t at = hash & (batch->slot_count - 1);
+    for (; batch->slots[at].place; at = (at + 1) & (batch->slot_count - 1)) {
+        if (batch->slots[at].tag != tag)
+            continue;
+        uint32_t place = batch->slots[at].place - 1;
+        if (record_word(batch, place, 1) == key_bytes && memcmp(record_key(batch, place), key, key_bytes) == 0) {
+            *id = record_word(batch, place, 0);
+            return WINDROW_OK;
+        }
+    }
+    enum windrow_status status;
+    if (batch->page_count >= batch->page_limit) {
+        if ((status = rehash(batch)))
+            return status;
+        return find_or_add(batch, key, key_bytes, hash, id);
+    }
+    size_t record_bytes = (8 + key_bytes + 7) & ~(size_t)7;
+    if ((batch->arena_bytes + record_bytes) / 8 >= UINT32_MAX - 1)
+        return windrow_fail(WINDROW_RESOURCE, "a batch outgrew 32 GiB of URLs; try a smaller --memory");
+    if ((status = grow(&batch->arena, &batch->arena_capacity, batch->arena_bytes + record_bytes, 1)))
+        return status;
+    size_t capacity = batch->page_capacity;
+    if ((status = grow(&batch->places, &capacity, batch->page_count + 1, sizeof *batch->places)))
+        return status;
+    if ((status = grow(&batch->crawled, &batch->page_capacity, batch->page_count + 1, 1)))
+        return status;
+    uint32_t place = (uint32_t)(batch->arena_bytes / 8), words[2] = {(uint32_t)batch->page_count, (uint32_t)key_bytes};
+    memcpy(batch->arena + batch->arena_bytes, words, 8);
+    memcpy(batch->arena + batch->arena_bytes + 8, key, key_bytes);
+    batch->arena_bytes += record_bytes;
+    batch->places[batch->page_count] = place;
+    batch->crawled[batch->page_count] = 0;
+    batch->slots[at] = (struct slot){tag, place + 1};
+    *id = (uint32_t)batch->page_count++;
+    return WINDROW_OK;
+}
+
+enum windrow_status windrow_batch_source(struct windrow_batch *batch, const char *key, size_t key_bytes)
+{
+    if (batch->open_line != SIZE_MAX) {
+        /* The same source as on the line before: its links simply go on. */
+        uint32_t place = batch->places[batch->lines[batch->open_line]];
+        if (record_word(batch, place, 1) == key_bytes && memcmp(record_key(batch, place), key, key_bytes) == 0)
+            return WINDROW_OK;
+    }
+    uint32_t id;
+    enum windrow_status status = find_or_add(batch, key, key_bytes, XXH3_64bits(key, key_bytes), &id);
+    if (!status)
+        status = grow(&batch->lines, &batch->line_capacity, batch->line_words + 2, sizeof *batch->lines);
+    if (status)
+        return status;
+    batch->crawled[id] = 1;
+    batch->open_line = batch->line_words;
+    batch->lines[batch->line_words++] = id;
+    batch->lines[batch->line_words++] = 0;
+    batch->line_count++;
+    return WINDROW_OK;
+}
+
+static enum windrow_status look_up_waiting(struct windrow_batch *batch)
+{
+    enum windrow_status status = grow(&batch->lines, &batch->line_capacity, batch->line_words + batch->waiting, sizeof *batch->lines);
+    if (status)
+        return status;
+    for (size_t index = 0; index < batch->waiting; index++) {
+        const struct slot *slot = &batch->slots[batch->waiting_hash[index] & (batch->slot_count - 1)];
+        if (slot->place)
+            __builtin_prefetch(batch->arena + (size_t)(slot->place - 1) * 8);
+    }
+    for (size_t index = 0; index < batch->waiting; index++) {
+        uint32_t id;
+        status = find_or_add(batch, (const char *)batch->waiting_keys.data + batch->waiting_at[index], batch->waiting_bytes[index],
+                             batch->waiting_hash[index], &id);
+        if (status)
+            return status;
+        batch->lines[batch->line_words++] = id;
+    }
+    batch->lines[batch->open_line + 1] += (uint32_t)batch->waiting;
+    batch->link_count += batch->waiting;
+    batch->waiting = 0;
+    batch->waiting_keys.bytes = 0;
+    return WINDROW_OK;
+}
+
+enum windrow_status windrow_batch_target(struct windrow_batch *batch, const char *key, size_t key_bytes, bool *self)
+{
+    uint32_t source_place = batch->places[batch->lines[batch->open_line]];
+    *self = record_word(batch, source_place, 1) == key_bytes && memcmp(record_key(batch, source_place), key, key_bytes) == 0;
+    if (*self)
+        return WINDROW_OK;
+    uint64_t hash = XXH3_64bits(key, key_bytes);
+    __builtin_prefetch(&batch->slots[hash & (batch->slot_count - 1)]);
+    size_t index = batch->waiting;
+    batch->waiting_hash[index] = hash;
+    batch->waiting_at[index] = (uint32_t)batch->waiting_keys.bytes;
+    batch->waiting_bytes[index] = (uint32_t)key_bytes;
+    enum windrow_status status = windrow_buffer_append(&batch->waiting_keys, key, key_bytes);
+    if (status)
+        return status;
+    batch->waiting++;
+    return batch->waiting == WAITING ? look_up_waiting(batch) : WINDROW_OK;
+}
+
+enum windrow_status windrow_batch_line_end(struct windrow_batch *batch)
+{
+    return batch->waiting ? look_up_waiting(batch) : WINDROW_OK;
+}
+
+static const uint8_t *sort_key(const void *context, uint32_t reference)
+{
+    const struct windrow_batch *batch = context;
+    return record_key(batch, batch->places[reference]);
+}
+
+/* Sorts the keys: order[new id].reference = local id, renumbered[local id] = new id. */
+static enum windrow_status sort_pages(const struct windrow_batch *batch, struct windrow_sort_item *order, uint32_t *renumbered)
+{
+    for (size_t page = 0; page < batch->page_count; page++)
+        order[page] = (struct windrow_sort_item){0, (uint32_t)page, record_word(batch, batch->places[page], 1)};
+    windrow_sort_keys(order, batch->page_count, sort_key, batch);
+    for (size_t page = 0; page < batch->page_count; page++)
+        renumbered[order[page].reference] = (uint32_t)page;
+    return WINDROW_OK;
+}
+
+/* Puts the sources of all links into `sources`, by target and, within a target, ascending: a counting sort
+ * of the lines by source, then a stable one of the links by target. ends[t] becomes the end of t's list. */
+static enum windrow_status sort_links(const struct windrow_batch *batch, const uint32_t *renumbered, uint32_t *ends, uint32_t *sources)
+{
+    size_t pages = batch->page_count;
+    uint32_t *line_ends = calloc(pages + 1, sizeof *line_ends);
+    size_t *starts = malloc((batch->line_count + 1) * sizeof *starts);
+    enum windrow_status status = WINDROW_OK;
+    if (!line_ends || !starts) {
+        status = windrow_fail(WINDROW_RESOURCE, "out of memory while sorting a batch; try a smaller --memory");
+        goto out;
+    }
+    for (size_t at = 0; at < batch->line_words; at += 2 + batch->lines[at + 1])
+        line_ends[renumbered[batch->lines[at]] + 1]++;
+    for (size_t page = 0; page < pages; page++)
+        line_ends[page + 1] += line_ends[page];
+    for (size_t at = 0; at < batch->line_words; at += 2 + batch->lines[at + 1])
+        starts[line_ends[renumbered[batch->lines[at]]]++] = at;
+
+    for (size_t at = 0; at < batch->line_words; at += 2 + batch->lines[at + 1])
+        for (uint32_t index = 0; index < batch->lines[at + 1]; index++)
+            ends[renumbered[batch->lines[at + 2 + index]] + 1]++;
+    for (size_t page = 0; page < pages; page++)
+        ends[page + 1] += ends[page];
+    for (size_t line = 0; line < batch->line_count; line++) {
+        const uint32_t *words = batch->lines + starts[line];
+        if (line + 4 < batch->line_count)
+            __builtin_prefetch(batch->lines + starts[line + 4]);
+        uint32_t source = renumbered[words[0]];
+        for (uint32_t index = 0; index < words[1]; index++)
+            sources[ends[renumbered[words[2 + index]]]++] = source;
+    }
+out:
+    free(line_ends);
+    free(starts);
+    return status;
+}
+
+static enum windrow_status write_links(const struct windrow_batch *batch, const uint32_t *ends, uint32_t *sources, uint32_t *degrees,
+                                       const char *path, struct windrow_batch_counts *counts)
+{
+    struct windrow_linkrun_writer run;
+    enum windrow_status status = windrow_linkrun_writer_open(&run, path);
+    if (status)
+        return status;
+    size_t begin = 0;
+    for (size_t target = 0; target < batch->page_count; target++) {
+        size_t end = ends[target], kept = 0;
+        uint32_t *list = sources + begin;
+        for (size_t index = begin; index < end; index++) {
+            if (kept && list[kept - 1] == sources[index])
+                continue;
+            list[kept++] = sources[index];
+            degrees[sources[index]]++;
+        }
+        counts->links += kept;
+        counts->duplicates += end - begin - kept;
+        if (kept && (status = windrow_linkrun_put_narrow(&run, target, list, kept)))
+            goto out;
+        begin = end;
+    }
+    status = windrow_linkrun_writer_finish(&run);
+out:
+    windrow_linkrun_writer_abandon(&run);
+    return status;
+}
+
+static enum windrow_status write_keys(const struct windrow_batch *batch, const struct windrow_sort_item *order, const uint32_t *degrees, const char *path)
+{
+    struct windrow_keyrun_writer run;
+    enum windrow_status status = windrow_keyrun_writer_open(&run, path);
+    if (status)
+        return status;
+    const uint8_t *before = NULL;
+    size_t before_bytes = 0;
+    for (size_t page = 0; page < batch->page_count; page++) {
+        if (page + 8 < batch->page_count)
+            __builtin_prefetch(record_key(batch, batch->places[order[page + 8].reference]));
+        uint32_t local = order[page].reference;
+        const uint8_t *key = record_key(batch, batch->places[local]);
+        size_t key_bytes = order[page].key_bytes;
+        size_t shared = before ? windrow_keyrun_shared(before, before_bytes, key, key_bytes, 0) : 0;
+        if ((status = windrow_keyrun_put(&run, key, key_bytes, shared, degrees[page], batch->crawled[local])))
+            goto out;
+        before = key;
+        before_bytes = key_bytes;
+    }
+    status = windrow_keyrun_writer_finish(&run);
+out:
+    windrow_keyrun_writer_abandon(&run);
+    return status;
+}
+
+enum windrow_status windrow_batch_write(struct windrow_batch *batch, const char *key_path, const char *link_path, struct windrow_batch_counts *counts)
+{
+    *counts = (struct windrow_batch_counts){.pages = batch->page_count};
+    size_t pages = batch->page_count;
+    if (batch->link_count > UINT32_MAX)
+        return windrow_fail(WINDROW_RESOURCE, "a batch outgrew 2^32 links; try a smaller --memory");
+    struct windrow_sort_item *order = malloc((pages + 1) * sizeof *order);
+    uint32_t *renumbered = malloc((pages + 1) * sizeof *renumbered);
+    uint32_t *ends = calloc(pages + 1, sizeof *ends);
+    uint32_t *degrees = calloc(pages + 1, sizeof *degrees);
+    uint32_t *sources = malloc((batch->link_count + 1) * sizeof *sources);
+    enum windrow_status status = WINDROW_OK;
+    if (!order || !renumbered || !ends || !degrees || !sources) {
+        status = windrow_fail(WINDROW_RESOURCE, "out of memory while sorting a batch; try a smaller --memory");
+        goto out;
+    }
+    if ((status = sort_pages(batch, order, renumbered)))
+        goto out;
+    if ((status = sort_links(batch, renumbered, ends, sources)))
+        goto out;
+    if ((status = write_links(batch, ends, sources, degrees, link_path, counts)))
+        goto out;
+    if ((status = write_keys(batch, order, degrees, key_path)))
+        goto out;
+    memset(batch->slots, 0, batch->slot_count * sizeof *batch->slots);
+    batch->arena_bytes = 0;
+    batch->page_count = 0;
+    batch->line_words = batch->line_count = batch->link_count = 0;
+    batch->open_line = SIZE_MAX;
+out:
+    free(order);
+    free(renumbered);
+    free(ends);
+    free(degrees);
+    free(sources);
+    return status;
+}
