@@ -126,4 +126,96 @@ void windrow_rank_defaults(struct windrow_rank_options *options);
  * can prove: the message says how many it can), WINDROW_DAMAGED, WINDROW_STOPPED. */
 enum windrow_status windrow_rank(const struct windrow_rank_options *options, bool *already_done);
 
+/* ---- Answers ------------------------------------------------------------------------------- */
+
+/* A run's scores and places, opened for questions. While the run goes on, it answers from the vector that
+ * was certified last. One object, one thread; open it again in another. */
+struct windrow_ranking;
+
+/* `run`: NULL for "main". WINDROW_USAGE: there is no such store; WINDROW_NO: not ranked yet;
+ * WINDROW_DAMAGED. */
+enum windrow_status windrow_ranking_open(const char *store, const char *run, struct windrow_ranking **ranking);
+void windrow_ranking_close(struct windrow_ranking *ranking); /* NULL is fine */
+
+struct windrow_ranking_facts {
+    uint64_t pages;
+    double digits;    /* proven for every score */
+    double error_l1;
+    bool finished;    /* false: the run goes on, or was stopped, and its scores can still get better */
+};
+struct windrow_ranking_facts windrow_ranking_facts(const struct windrow_ranking *ranking);
+
+enum windrow_per { WINDROW_PER_ALL, WINDROW_PER_HOST, WINDROW_PER_DOMAIN };
+
+/* One page of an answer. Text is not terminated and valid until the call that gave the row, or the
+ * taker that was given it, returns or asks again. URLs and names are ASCII in normal form. */
+struct windrow_row {
+    const char *group;        /* host or domain; NULL where the whole crawl is asked about */
+    size_t group_bytes;
+    uint64_t place;           /* from 1, in the group or the crawl; equal scores stand in host order */
+    uint64_t range_first;     /* the places that the certificate leaves possible: one when proven */
+    uint64_t range_last;
+    double score;             /* sums to 1 over all pages */
+    double mean_multiple;     /* score times the number of pages */
+    const char *url;
+    size_t url_bytes;
+};
+
+/* Takes a row; anything but WINDROW_OK ends the answer, which then returns it. */
+typedef enum windrow_status (*windrow_taker)(void *context, const struct windrow_row *row);
+
+/* The first `count` pages of the crawl, or of each host or domain in host order. Memory grows with
+ * `count`, not with the crawl; per domain also with the hosts that share their last two labels. */
+enum windrow_status windrow_ranking_top(struct windrow_ranking *ranking, enum windrow_per per, uint64_t count,
+                                        windrow_taker taker, void *context);
+
+/* One page's score and its place in the crawl. `url` may be spelled in any way that has its normal form.
+ * *folded (may be NULL): an alias names another page for it, which the row is about.
+ * WINDROW_NO: the URL is unknown. */
+enum windrow_status windrow_ranking_score(struct windrow_ranking *ranking, const char *url, size_t url_bytes,
+                                          struct windrow_row *row, bool *folded);
+
+/* Every page with its place in the crawl, in host order. */
+enum windrow_status windrow_ranking_all(struct windrow_ranking *ranking, windrow_taker taker, void *context);
+
+/* How a store and its run stand: done, or how far the job on them is. */
+enum windrow_state { WINDROW_STATE_SHARDING, WINDROW_STATE_SHARDED, WINDROW_STATE_RANKING, WINDROW_STATE_STOPPED,
+                     WINDROW_STATE_FINISHED, WINDROW_STATES };
+extern const char *const windrow_state_names[WINDROW_STATES];
+
+struct windrow_standing {
+    enum windrow_state state;
+    bool sharded;               /* the store is whole: the next eight lines are known */
+    uint64_t pages;
+    uint64_t crawled_pages;
+    uint64_t dangling_pages;
+    uint64_t links;
+    uint64_t hosts;
+    uint64_t core_pages;
+    uint64_t core_links;
+    uint64_t dropped[WINDROW_DROP_COUNT];
+    bool begun;                 /* there is a run: the next two lines are known */
+    uint64_t sweeps;            /* all passes over the core */
+    uint64_t link_visits;       /* all passes counted */
+    bool certified;             /* scores are proven: the next four lines are known */
+    double error_l1;
+    double alpha;               /* no score is off by more */
+    double rho;                 /* nor by more than this share of itself */
+    double digits;
+    double elapsed_seconds;     /* of the job that is or was at work last */
+    double seconds_left;        /* 0 when it is done; negative: unknown */
+    uint64_t peak_memory_bytes; /* 0: unknown */
+    uint64_t store_bytes;       /* on disk, runs included */
+    double link_bits;           /* block bytes times 8 over links */
+};
+
+/* `run`: NULL for "main", which need not be there. WINDROW_USAGE: there is no such store;
+ * WINDROW_NO: there is no such run; WINDROW_DAMAGED. */
+enum windrow_status windrow_standing_read(const char *store, const char *run, struct windrow_standing *standing);
+
+/* Reads a store and all its runs back against checksums, counts and invariants. Calls `found` (never two
+ * calls at once) with a line for each damage; WINDROW_NO when there was any. WINDROW_USAGE: no store. */
+enum windrow_status windrow_verify(const char *store, unsigned threads, void (*found)(void *context, const char *damage),
+                                   void *context, const struct windrow_watch *watch);
+
 #endif
