@@ -67,7 +67,7 @@ static enum windrow_status ask(struct question *question, const char *url, size_
     bool folded = false;
     enum windrow_status status = windrow_ranking_score(question->ranking, url, url_bytes, &row, &folded);
     if (status == WINDROW_NO) {
-        complain("score", "unknown: %.*s", url_bytes < 4096 ? (int)url_bytes : 4096, url);
+        complain("score", "unknown: %.*s: %s", url_bytes < 4096 ? (int)url_bytes : 4096, url, windrow_message());
         question->unknown = true;
         return WINDROW_OK;
     }
