@@ -243,6 +243,11 @@ static enum windrow_status damaged(const struct windrow_block_record *record, co
                         (unsigned long long)record->first_target, record->segment, (unsigned long long)record->offset, what);
 }
 
+uint32_t windrow_block_payload_flags(const uint8_t *payload)
+{
+    return get32(payload + 44);
+}
+
 enum windrow_status windrow_block_parse(const uint8_t *payload, size_t payload_bytes,
                                         const struct windrow_block_record *record, struct windrow_block *block)
 {

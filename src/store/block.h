@@ -81,6 +81,9 @@ struct windrow_block_input {
 /* Appends the payload of a block to `out`. Threads: touches nothing but its arguments. */
 enum windrow_status windrow_block_encode(const struct windrow_block_input *input, struct windrow_buffer *out);
 
+/* The flags of a payload that windrow_block_encode() has just made, WIDE included: for its record. */
+uint32_t windrow_block_payload_flags(const uint8_t *payload);
+
 /* Finds the parts of a payload, which is not trusted. WINDROW_DAMAGED when sizes contradict each other
  * or the record; then nothing in `block` may be used. Counts and gaps are not checked here: the sums of
  * counts are checked by windrow_block_lists() and by the sweep, each where it decodes them. */

@@ -92,7 +92,7 @@ static size_t facts_numbers(struct windrow_store_facts *facts, uint64_t **number
     numbers[count++] = &facts->links;
     numbers[count++] = &facts->core_links;
     numbers[count++] = &facts->hosts;
-    numbers[count++] = &facts->url_bytes;
+    numbers[count++] = &facts->key_bytes;
     for (int drop = 0; drop < WINDROW_DROP_COUNT; drop++)
         numbers[count++] = &facts->dropped[drop];
     return count;

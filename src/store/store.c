@@ -240,48 +240,6 @@ uint64_t windrow_store_host_of_page(const struct windrow_store *store, uint64_t 
     return low;
 }
 
-enum windrow_status windrow_store_host_find(const struct windrow_store *store, const char *name, size_t name_bytes, uint64_t *host)
-{
-    /* Hosts stand in the order of their reversed labels, which is the order of the host parts of page keys. */
-    struct windrow_keyer *keyer = NULL;
-    enum windrow_status status = windrow_keyer_create(&keyer);
-    if (status)
-        return status;
-    struct windrow_buffer url = {0};
-    const char *key;
-    size_t key_bytes;
-    if ((status = windrow_buffer_append(&url, "http://", 7)) || (status = windrow_buffer_append(&url, name, name_bytes)) ||
-        (status = windrow_buffer_append(&url, "/", 1)))
-        goto out;
-    status = WINDROW_NO;
-    if (windrow_keyer_key(keyer, (const char *)url.data, url.bytes, &key, &key_bytes) == WINDROW_URL_OK) {
-        size_t wanted_bytes = windrow_key_host_bytes(key, key_bytes);
-        struct windrow_page_reader *reader = NULL;
-        uint64_t frame = windrow_pages_frame_of_key(&store->pages, (const uint8_t *)key, wanted_bytes + 1);
-        (void)reader;
-        /* The host's first page lies in this frame or is the first of the next one; walk over the few hosts between. */
-        uint64_t candidate = store->pages.frame_count ? windrow_store_host_of_page(store, store->pages.marks[frame].first_entry) : 0;
-        char text[WINDROW_KEY_BYTES_MAX + 1];
-        size_t text_bytes = windrow_key_host(key, key_bytes, text, sizeof text);
-        uint64_t last = frame + 1 < store->pages.frame_count ? windrow_store_host_of_page(store, store->pages.marks[frame + 1].first_entry)
-                                                             : store->manifest.facts.hosts - 1;
-        for (; candidate <= last && candidate < store->manifest.facts.hosts; candidate++) {
-            struct windrow_host facts = windrow_store_host(store, candidate);
-            if (facts.name_bytes == text_bytes && memcmp(facts.name, text, text_bytes) == 0) {
-                *host = candidate;
-                status = WINDROW_OK;
-                break;
-            }
-        }
-    }
-    if (status)
-        windrow_fail(WINDROW_NO, "the crawl has no page of this host");
-out:
-    windrow_buffer_free(&url);
-    windrow_keyer_destroy(keyer);
-    return status;
-}
-
 uint64_t windrow_store_block_count(const struct windrow_store *store, enum windrow_block_kind kind)
 {
     return store->manifest.block_counts[kind];

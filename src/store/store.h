@@ -24,7 +24,7 @@ struct windrow_store_facts {
     uint64_t core_links;      /* from core page to core page */
     uint64_t hosts;
     uint64_t dropped[WINDROW_DROP_COUNT];
-    uint64_t url_bytes;       /* of all pages' URLs */
+    uint64_t key_bytes;       /* of all page keys; a URL is some 6 bytes longer */
     uint64_t fingerprint;     /* of everything in the store: equal stores have equal ones */
 };
 
@@ -58,9 +58,6 @@ struct windrow_host {
 /* host <= hosts: the host after the last has the store's page and core counts as its firsts, and no name. */
 struct windrow_host windrow_store_host(const struct windrow_store *store, uint64_t host);
 uint64_t windrow_store_host_of_page(const struct windrow_store *store, uint64_t page);
-/* The index of the host with this name (in normal form). WINDROW_NO: unknown. */
-enum windrow_status windrow_store_host_find(const struct windrow_store *store, const char *name, size_t name_bytes, uint64_t *host);
-
 /* Blocks in target order. */
 uint64_t windrow_store_block_count(const struct windrow_store *store, enum windrow_block_kind kind);
 const struct windrow_block_record *windrow_store_block_record(const struct windrow_store *store, enum windrow_block_kind kind, uint64_t block);
