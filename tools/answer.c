@@ -34,6 +34,6 @@ enum windrow_status answer_open(const struct answer_request *request, struct win
         return finish(request->command, status);
     struct windrow_ranking_facts facts = windrow_ranking_facts(*ranking);
     if (!facts.finished)
-        talk(request->command, "the run is not finished: these scores have %.2f proven digits so far", facts.digits);
+        talk(request->command, "the run is not finished: these scores have %s proven digits so far", proven_digits(facts.digits));
     return WINDROW_OK;
 }

@@ -171,12 +171,19 @@ double number_value(const char *text, const char *option, struct argp_state *sta
     return number;
 }
 
+enum { TEXT_BUFFERS = 12, TEXT_BYTES = 32 };
+
+/* Enough buffers for all the numbers of one message. */
+static char *next_text(void)
+{
+    static char buffers[TEXT_BUFFERS][TEXT_BYTES];
+    static unsigned turn;
+    return buffers[turn++ % TEXT_BUFFERS];
+}
+
 const char *grouped(uint64_t number)
 {
-    enum { BUFFERS = 12, BYTES = 32 };
-    static char buffers[BUFFERS][BYTES];
-    static unsigned turn;
-    char *to = buffers[turn++ % BUFFERS] + BYTES;
+    char *to = next_text() + TEXT_BYTES;
     *--to = 0;
     for (unsigned digits = 0; number || !digits; digits++, number /= 10) {
         if (digits && digits % 3 == 0)
@@ -184,4 +191,11 @@ const char *grouped(uint64_t number)
         *--to = (char)('0' + number % 10);
     }
     return to;
+}
+
+const char *proven_digits(double digits)
+{
+    char *text = next_text();
+    snprintf(text, TEXT_BYTES, "%.2f", floor(digits * 100) / 100);
+    return text;
 }

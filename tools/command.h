@@ -46,5 +46,7 @@ void usage_error(struct argp_state *state, const char *format, ...) __attribute_
 
 /* 12345678 as "12,345,678"; in one of a few buffers that take turns. */
 const char *grouped(uint64_t number);
+/* Digits with two decimals, rounded down, since no more is proven; in the same buffers. */
+const char *proven_digits(double digits);
 
 #endif

@@ -82,8 +82,8 @@ static void summarise(const struct windrow_rank_options *rank, bool already_done
         return;
     if (already_done)
         talk("rank", "run %s has proven as much already; nothing was done", rank->run);
-    talk("rank", "run %s: %s pages, %s links; %.2f digits of every score proven, error_l1 at most %.2e", rank->run,
-         grouped(standing.pages), grouped(standing.links), standing.digits, standing.error_l1);
+    talk("rank", "run %s: %s pages, %s links; %s digits of every score proven, error_l1 %.2e", rank->run,
+         grouped(standing.pages), grouped(standing.links), proven_digits(standing.digits), standing.error_l1);
     talk("rank", "%s sweeps, %s link visits, %.1f s, peak memory %s MiB", grouped(standing.sweeps), grouped(standing.link_visits),
          standing.elapsed_seconds, grouped((standing.peak_memory_bytes + (1 << 20) - 1) >> 20));
 }

@@ -111,7 +111,7 @@ static void print_plain(const struct windrow_standing *standing)
     if (standing->begun)
         printf("work            %s sweeps, %s link visits\n", grouped(standing->sweeps), grouped(standing->link_visits));
     if (standing->certified)
-        printf("proven          %.2f digits of every score; error_l1 %.3g, alpha %.3g, rho %.3g\n", standing->digits, standing->error_l1,
+        printf("proven          %s digits of every score; error_l1 %.3g, alpha %.3g, rho %.3g\n", proven_digits(standing->digits), standing->error_l1,
                standing->alpha, standing->rho);
     printf("elapsed         %.1f s\n", standing->elapsed_seconds);
     if (standing->state != WINDROW_STATE_FINISHED && standing->state != WINDROW_STATE_SHARDED) {

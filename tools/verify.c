@@ -58,7 +58,7 @@ enum windrow_status verify_command(int argc, char **argv)
     enum windrow_status status = windrow_verify(request.store, request.threads, print_damage, &count, &watch);
     progress_end();
     if (status == WINDROW_NO && count) {
-        talk("verify", "%s: %s damages found", request.store, grouped(count));
+        talk("verify", "%s: %s found, see standard output", request.store, count == 1 ? "one damage" : "several damages");
         return status;
     }
     if (!status)

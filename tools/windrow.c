@@ -63,9 +63,15 @@ static char *list_commands(int key, const char *text, void *input)
     for (size_t i = 0; i < COMMANDS; i++)
         fprintf(memory, "  %-8s %s\n", commands[i].name, commands[i].summary);
     fputs("\n`windrow COMMAND --help' tells a command's options.\n\n"
-          "Exit codes: 0 done; 1 the answer is no (damage found, URL unknown, not ranked yet); 2 usage;\n"
-          "3 input unusable; 4 store or ledger damaged; 5 out of disk, memory budget or another resource;\n"
-          "6 stopped at a checkpoint, run again to go on; 70 a bug of ours.", memory);
+          "Exit codes:\n"
+          "  0  done\n"
+          "  1  the answer is no: damage found, URL unknown, not ranked yet\n"
+          "  2  usage\n"
+          "  3  input unusable\n"
+          "  4  store or ledger damaged\n"
+          "  5  out of disk, memory budget or another resource\n"
+          "  6  stopped at a checkpoint, run again to go on\n"
+          "  70 a bug of ours", memory);
     fclose(memory);
     return list;
 }
