@@ -50,7 +50,7 @@ static enum windrow_status take_row(void *context, const struct windrow_row *row
     table_count(table, row->place);
     table_range(table, row->range_first, row->range_last);
     table_number(table, row->score, 17);
-    table_number(table, row->mean_multiple, 12);
+    table_number(table, row->mean_multiple, 17);
     return table_state(table);
 }
 
