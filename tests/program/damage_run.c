@@ -170,7 +170,7 @@ static void test_damaged_block(void **state)
     struct scratch_listing files = scratch_list(room->store);
     size_t largest = files.count;
     for (size_t i = 0; i < files.count; i++)
-        if (strstr(files.paths[i], "block") != NULL && (largest == files.count || files.file_bytes[i] > files.file_bytes[largest]))
+        if (strstr(files.paths[i], ".core.zst") != NULL && (largest == files.count || files.file_bytes[i] > files.file_bytes[largest]))
             largest = i;
     assert_true(largest < files.count);
     char *copy = scratch_path(room->directory, "block"), *path = scratch_path(copy, files.paths[largest]);
