@@ -1,4 +1,4 @@
-/* plain_web: a dump of pairs read a second time, plainly: DESIGN's normal form and link rules written
+/* plain_web: a dump of pairs read a second time, plainly: the normal form and the link rules written
  * again from the RFC with no thought of speed, so that what the program keeps of a real web can be
  * counted and ranked without it. Knows ASCII hosts only (no IDN) and needs the dump in memory.
  */

@@ -35,8 +35,9 @@ static int set_up(void **state)
     room->directory = scratch_make();
     room->dump = scratch_path(room->directory, "dump.tsv");
     room->store = scratch_path(room->directory, "store");
-    int made = program_wait(program_start(NULL, room->dump, NULL, ARGUMENTS("crawlgen", "--links", "300K", "--shape", "pairs", "--seed", "5")));
-    assert_int_equal(made, 0);
+    pid_t generator = program_start(NULL, room->dump, NULL,
+                                    ARGUMENTS("crawlgen", "--links", "300K", "--shape", "pairs", "--seed", "5"));
+    assert_int_equal(program_wait(generator), 0);
     MUST_WINDROW("shard", "--quiet", "--out", room->store, room->dump);
     char *ranked = scratch_path(room->directory, "ranked");
     scratch_copy(room->store, ranked);
