@@ -1,0 +1,270 @@
+/* The certifying passes: over the rim, which gives the dangling pages their scores, and over the core.
+ *
+ * With u = 2^-53, and k roundings in the sum over a page's in-links (kernel.h), the residual that the core
+ * pass computes differs from the true one of the scores handed out by at most ((k+3) h + 4 y) u / scale and
+ * what the constant c is off, 16 u v; h = (1-beta) v + beta sum, y the page's own entry. A dangling page's y
+ * is such an h itself, so that its residual is c v, and rounding below (k+8) u x.
+ */
+#include "rank/solver.h"
+
+#include "rank/solver_private.h"
+
+#include <math.h>
+#include <stdlib.h>
+
+static const double unit = 0x1p-53;
+
+static void add_total(struct windrow_solver_private *own, double value)
+{
+    double sum = own->total + value;
+    own->total_error += fabs(own->total) >= fabs(value) ? (own->total - sum) + value : (value - sum) + own->total;
+    own->total = sum;
+}
+
+static void clear_totals(struct windrow_solver *solver)
+{
+    struct windrow_solver_private *own = solver->own;
+    own->total = own->total_error = own->rounding = 0;
+    own->piece_links = 0;
+    solver->state.carry = (struct windrow_solver_carry){0};
+    for (unsigned worker = 0; worker < own->workers; worker++)
+        windrow_class_table_clear(&own->tables[worker]);
+}
+
+/* Adds a piece's sum to its list's. True when the list is whole: its sum and links are handed out. */
+static bool join_piece(struct windrow_solver *solver, const struct windrow_block_record *record, double piece_sum, double *sum, uint64_t *links)
+{
+    struct windrow_solver_carry *carry = &solver->state.carry;
+    struct windrow_solver_private *own = solver->own;
+    if (!carry->piece_open)
+        carry->piece_sum = carry->piece_error = 0, own->piece_links = 0;
+    double next = carry->piece_sum + piece_sum;
+    carry->piece_error += carry->piece_sum >= piece_sum ? (carry->piece_sum - next) + piece_sum : (piece_sum - next) + carry->piece_sum;
+    carry->piece_sum = next;
+    own->piece_links += record->link_count;
+    carry->piece_open = !(record->flags & WINDROW_BLOCK_LAST_PIECE);
+    *sum = carry->piece_sum + carry->piece_error;
+    *links = own->piece_links;
+    return !carry->piece_open;
+}
+
+/* ---- The rim ------------------------------------------------------------------------------- */
+
+/* A dangling page's y is known: notes the roundings of its class (by y/v, as the scale is not known yet). */
+static double note_rim_page(struct windrow_solver *solver, struct windrow_class_table *table, uint64_t page, double sum, uint64_t links,
+                            double *rounding)
+{
+    double jump = windrow_solver_rim_jump(solver, page), beta = solver->options.beta, y = jump + beta * sum;
+    double roundings = (windrow_kernel_roundings(links) + 8) * unit;
+    solver->rim[page] = y;
+    if (!(y > 0))
+        return y;
+    unsigned class_number = windrow_class_of(y / (jump / (1 - beta)));
+    table->rounding[class_number] = fmax(table->rounding[class_number], roundings);
+    table->least_score = fmin(table->least_score, y);
+    *rounding += roundings * y;
+    return y;
+}
+
+static enum windrow_status rim_block(void *context, uint64_t block, unsigned index, struct windrow_kernel *kernel, unsigned worker)
+{
+    (void)block;
+    struct windrow_solver *solver = context;
+    uint64_t core_pages = solver->options.web->core_pages, first = kernel->record->first_target;
+    struct windrow_solver_slot *slot = &solver->own->slots[index];
+    enum windrow_status status = windrow_solver_slot_room(slot, kernel->record->target_count);
+    if (!status)
+        status = windrow_kernel_gather(kernel, solver->values, core_pages, NULL);
+    if (status)
+        return status;
+    double *sums = windrow_solver_slot_values(slot);
+    if ((status = windrow_kernel_sums(kernel, solver->values, core_pages, sums)))
+        return status;
+    slot->sum = slot->rounding = 0;
+    slot->piece_sum = sums[0];
+    if (kernel->record->flags & WINDROW_BLOCK_PIECE)
+        return WINDROW_OK;
+    uint32_t run = 0;
+    for (uint32_t t = 0; t < kernel->record->target_count; t++)
+        slot->sum += note_rim_page(solver, &solver->own->tables[worker], first + t, sums[t], windrow_kernel_links(kernel, t, &run), &slot->rounding);
+    return WINDROW_OK;
+}
+
+static enum windrow_status rim_barrier(void *context, uint64_t first, uint64_t end)
+{
+    struct windrow_solver *solver = context;
+    const struct windrow_web *web = solver->options.web;
+    for (uint64_t block = first; block < end; block++) {
+        const struct windrow_block_record *record = web->record(web->context, WINDROW_BLOCK_RIM, block);
+        struct windrow_solver_slot *slot = &solver->own->slots[block - first];
+        double sum;
+        uint64_t links;
+        if (record->flags & WINDROW_BLOCK_PIECE && join_piece(solver, record, slot->piece_sum, &sum, &links))
+            slot->sum = note_rim_page(solver, &solver->own->tables[0], record->first_target, sum, links, &slot->rounding);
+        add_total(solver->own, slot->sum);
+        solver->own->rounding += slot->rounding;
+    }
+    windrow_solver_count_links(solver, WINDROW_BLOCK_RIM, first, end);
+    return WINDROW_OK;
+}
+
+/* ---- The core ------------------------------------------------------------------------------ */
+
+static void note_core_page(struct windrow_solver *solver, struct windrow_class_table *table, uint64_t page, double sum, uint64_t links,
+                           struct windrow_solver_slot *slot)
+{
+    double jump = windrow_solver_jump(solver, page), beta = solver->options.beta, scale = solver->scale;
+    double jump_entry = jump / (1 - beta), h = jump + beta * sum, y = solver->values[page] * solver->options.web->degrees[page];
+    double rounding = (((windrow_kernel_roundings(links) + 3) * h + 4 * y) / scale + 16 * jump_entry) * unit;
+    double residual = fabs((h - y) / scale + solver->own->jump_excess * jump_entry) + rounding;
+    slot->sum += residual;
+    slot->rounding += rounding;
+    if (!(y > 0))
+        return;
+    double x = y / scale;
+    unsigned class_number = windrow_class_of(x / jump_entry);
+    if (residual > table->residual[class_number] * x)
+        table->residual[class_number] = residual / x;
+    if (rounding > table->rounding[class_number] * x)
+        table->rounding[class_number] = rounding / x;
+    table->least_score = fmin(table->least_score, x);
+}
+
+static enum windrow_status core_block(void *context, uint64_t block, unsigned index, struct windrow_kernel *kernel, unsigned worker)
+{
+    (void)block;
+    struct windrow_solver *solver = context;
+    uint64_t core_pages = solver->options.web->core_pages, first = kernel->record->first_target;
+    struct windrow_solver_slot *slot = &solver->own->slots[index];
+    enum windrow_status status = windrow_solver_slot_room(slot, kernel->record->target_count);
+    if (!status)
+        status = windrow_kernel_gather(kernel, solver->values, core_pages, NULL);
+    if (status)
+        return status;
+    double *sums = windrow_solver_slot_values(slot);
+    if ((status = windrow_kernel_sums(kernel, solver->values, core_pages, sums)))
+        return status;
+    slot->sum = slot->rounding = 0;
+    slot->piece_sum = sums[0];
+    if (kernel->record->flags & WINDROW_BLOCK_PIECE)
+        return WINDROW_OK;
+    uint32_t run = 0;
+    for (uint32_t t = 0; t < kernel->record->target_count; t++)
+        note_core_page(solver, &solver->own->tables[worker], first + t, sums[t], windrow_kernel_links(kernel, t, &run), slot);
+    return WINDROW_OK;
+}
+
+static enum windrow_status core_barrier(void *context, uint64_t first, uint64_t end)
+{
+    struct windrow_solver *solver = context;
+    const struct windrow_web *web = solver->options.web;
+    for (uint64_t block = first; block < end; block++) {
+        const struct windrow_block_record *record = web->record(web->context, WINDROW_BLOCK_CORE, block);
+        struct windrow_solver_slot *slot = &solver->own->slots[block - first];
+        double sum;
+        uint64_t links;
+        if (record->flags & WINDROW_BLOCK_PIECE && join_piece(solver, record, slot->piece_sum, &sum, &links))
+            note_core_page(solver, &solver->own->tables[0], record->first_target, sum, links, slot);
+        add_total(solver->own, slot->sum);
+        solver->own->rounding += slot->rounding;
+    }
+    windrow_solver_count_links(solver, WINDROW_BLOCK_CORE, first, end);
+    return WINDROW_OK;
+}
+
+/* ---- All together -------------------------------------------------------------------------- */
+
+struct core_sum {
+    const struct windrow_solver *solver;
+    double *chunks;
+};
+
+static enum windrow_status core_sum_task(void *context, uint64_t chunk, unsigned worker)
+{
+    (void)worker;
+    const struct core_sum *core_sum = context;
+    const struct windrow_web *web = core_sum->solver->options.web;
+    uint64_t first = chunk * WINDROW_MIXING_CHUNK, end = first + WINDROW_MIXING_CHUNK;
+    struct windrow_solver_private local = {0};
+    for (uint64_t i = first; i < end && i < web->core_pages; i++)
+        add_total(&local, core_sum->solver->values[i] * web->degrees[i]);
+    core_sum->chunks[chunk] = local.total + local.total_error;
+    return WINDROW_OK;
+}
+
+static enum windrow_status add_core(struct windrow_solver *solver)
+{
+    uint64_t chunk_count = (solver->options.web->core_pages + WINDROW_MIXING_CHUNK - 1) / WINDROW_MIXING_CHUNK;
+    struct core_sum core_sum = {solver, malloc((chunk_count + 1) * sizeof(double))};
+    if (!core_sum.chunks)
+        return windrow_fail(WINDROW_RESOURCE, "out of memory while certifying");
+    enum windrow_status status = windrow_crew_run(solver->options.crew, chunk_count, core_sum_task, &core_sum);
+    for (uint64_t chunk = 0; !status && chunk < chunk_count; chunk++)
+        add_total(solver->own, core_sum.chunks[chunk]);
+    free(core_sum.chunks);
+    return status;
+}
+
+static void join_workers(struct windrow_solver *solver, struct windrow_class_table *table)
+{
+    windrow_class_table_clear(table);
+    for (unsigned worker = 0; worker < solver->own->workers; worker++)
+        windrow_class_table_join(table, &solver->own->tables[worker]);
+}
+
+/* The rim's classes were by y/v. Each becomes entries of the class by x/v in which its pages with the least
+ * v/x are, with the residual of those with the greatest. */
+static void add_rim_classes(const struct windrow_solver *solver, const struct windrow_class_table *rim, struct windrow_class_table *table)
+{
+    double scale = solver->scale, beta = solver->options.beta, excess = fabs(solver->own->jump_excess) + 16 * unit;
+    for (unsigned c = 0; c < WINDROW_CLASSES; c++) {
+        if (rim->rounding[c] == 0)
+            continue;
+        /* v/x of these pages lies between `least` and `most`; y is (1-beta) v at least, whatever the class. */
+        double least = windrow_class_least_jump(c) * scale * (1 - 1e-11);
+        double most = fmin(c > 0 ? windrow_class_least_jump(c - 1) * scale : INFINITY, scale / (1 - beta)) * (1 + 1e-11);
+        unsigned to = windrow_class_of(1 / least);
+        table->rounding[to] = fmax(table->rounding[to], rim->rounding[c] + 16 * unit * most);
+        table->residual[to] = fmax(table->residual[to], rim->rounding[c] + excess * most);
+    }
+    table->least_score = fmin(table->least_score, rim->least_score / scale * (1 - 1e-12));
+}
+
+enum windrow_status windrow_solver_certify(struct windrow_solver *solver, struct windrow_certificate *certificate)
+{
+    const struct windrow_web *web = solver->options.web;
+    struct windrow_solver_private *own = solver->own;
+    const struct windrow_stream_job rim_job = {.context = solver, .work = rim_block, .barrier = rim_barrier};
+    const struct windrow_stream_job core_job = {.context = solver, .work = core_block, .barrier = core_barrier};
+    struct windrow_class_table rim_table, table;
+    double beta = solver->options.beta;
+    clear_totals(solver);
+    enum windrow_status status = windrow_streamer_run(own->streamer, WINDROW_BLOCK_RIM, 0, &rim_job);
+    if (status)
+        return status;
+    join_workers(solver, &rim_table);
+    double rim_sum = own->total + own->total_error, rim_rounding = own->rounding;
+    if ((status = add_core(solver)))
+        return status;
+    solver->scale = own->total + own->total_error;
+    if (!(solver->scale > 0) || !isfinite(solver->scale))
+        return windrow_fail(WINDROW_BUG, "the scores do not add up to a positive number");
+    own->jump_excess = ((1 - beta) + beta * (rim_sum / solver->scale)) - (1 - beta) / solver->scale;
+    double rim_jump = (double)(web->pages - web->core_pages) / (double)web->pages;
+    if (solver->options.rim_jump) {
+        rim_jump = 0;
+        for (uint64_t i = 0; i < web->pages - web->core_pages; i++)
+            rim_jump += solver->options.rim_jump[i];
+    }
+
+    clear_totals(solver);
+    if ((status = windrow_streamer_run(own->streamer, WINDROW_BLOCK_CORE, 0, &core_job)))
+        return status;
+    solver->state.carry = (struct windrow_solver_carry){0};
+    join_workers(solver, &table);
+    add_rim_classes(solver, &rim_table, &table);
+    double rounding = own->rounding + rim_rounding / solver->scale + 16 * unit * rim_jump;
+    double residual = own->total + own->total_error + rim_rounding / solver->scale + (fabs(own->jump_excess) + 16 * unit) * rim_jump * (1 + 1e-9);
+    windrow_certificate_make(certificate, beta, &table, residual, rounding, 16 * unit);
+    return WINDROW_OK;
+}
