@@ -45,6 +45,10 @@ static void file_write(int file, const char *text, size_t bytes)
 /* All that a reader says, as lines "file:number>source|target|target"; the pieces of a long line are put together. */
 static void story_add(struct windrow_buffer *story, const struct windrow_dump_chunk *chunk)
 {
+    static struct {
+        uint8_t data[WINDROW_DUMP_FIELD_BYTES_MAX + 1];
+        size_t bytes;
+    } source; /* of the last line, which a continued line repeats */
     struct windrow_dump_lines lines;
     struct windrow_dump_line line;
     struct windrow_dump_target target;
@@ -59,6 +63,11 @@ static void story_add(struct windrow_buffer *story, const struct windrow_dump_ch
                 continue;
             }
             windrow_buffer_append(story, line.source, line.source_bytes);
+            source.bytes = line.source_bytes < sizeof source.data ? line.source_bytes : sizeof source.data;
+            memcpy(source.data, line.source, source.bytes);
+        } else {
+            assert_int_equal(line.source_bytes, source.bytes);
+            assert_true(source.bytes == 0 || memcmp(line.source, source.data, source.bytes) == 0);
         }
         while (windrow_dump_line_target(&line, &target)) {
             windrow_buffer_append(story, target.nofollow ? "!" : "|", 1);
@@ -230,6 +239,54 @@ static void long_lists_are_split_with_their_source_repeated(void **state)
     windrow_dump_chunk_free(&chunk);
     windrow_buffer_free(&text);
     windrow_buffer_free(&expected);
+}
+
+static void position_inside_a_late_line_finds_its_source(void **state)
+{
+    (void)state;
+    /* More than what is read at a time lies in front of the long line. */
+    struct windrow_buffer text = {0}, expected = {0};
+    for (int i = 1; i <= 60000; i++) {
+        char line[64];
+        windrow_buffer_append(&text, "before:\tit:\n", 12);
+        windrow_buffer_append(&expected, line, (size_t)snprintf(line, sizeof line, "\n0:%d>before:|it:", i));
+    }
+    windrow_buffer_append(&text, "source:\tb:\tc:\td:\te:\n", 20);
+    windrow_buffer_append(&expected, "\n0:60001>source:|b:|c:|d:|e:", 29);
+    file_write(0, (char *)text.data, text.bytes);
+    struct windrow_buffer tail = {0};
+    struct windrow_dump_options options = options_for(1, WINDROW_DUMP_LISTS, 12 * 1000);
+    struct windrow_dump_chunk chunk = {0};
+    struct windrow_dump_position position = {0};
+    for (int read = 0; read < 70; read++) {
+        struct windrow_dump *dump;
+        /* The long line comes in pieces when chunks are small. */
+        options.chunk_bytes = read < 60 ? 12 * 1000 : 10;
+        assert_int_equal(windrow_dump_open(&options, &position, &dump), WINDROW_OK);
+        assert_int_equal(windrow_dump_read(dump, &chunk), WINDROW_OK);
+        position = chunk.end;
+        story_add(&tail, &chunk);
+        windrow_dump_close(dump);
+        if (chunk.bytes == 0)
+            break;
+    }
+    windrow_buffer_append(&tail, "", 1);
+    assert_string_equal((char *)tail.data, (char *)expected.data);
+    windrow_dump_chunk_free(&chunk);
+    windrow_buffer_free(&tail);
+    windrow_buffer_free(&text);
+    windrow_buffer_free(&expected);
+}
+
+static void lines_are_counted_however_many_there_are(void **state)
+{
+    (void)state;
+    char text[10002];
+    memset(text, '\n', 10000);
+    memcpy(text + 10000, "a:", 2);
+    file_write(0, text, sizeof text);
+    check_story(1, WINDROW_DUMP_AUTO, 10000, 0, "\n0:10001>a:");
+    check_story(1, WINDROW_DUMP_AUTO, 0, 0, "\n0:10001>a:");
 }
 
 static void byte_order_mark_stays_out_of_split_lines(void **state)
@@ -436,6 +493,8 @@ int main(void)
         cmocka_unit_test(ids_are_not_supported_yet),
         cmocka_unit_test(chunks_and_stops_do_not_show),
         cmocka_unit_test(long_lists_are_split_with_their_source_repeated),
+        cmocka_unit_test(position_inside_a_late_line_finds_its_source),
+        cmocka_unit_test(lines_are_counted_however_many_there_are),
         cmocka_unit_test(byte_order_mark_stays_out_of_split_lines),
         cmocka_unit_test(endless_lines_are_bounded),
         cmocka_unit_test(other_streams_are_refused_on_resume),

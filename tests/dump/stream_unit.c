@@ -259,6 +259,17 @@ static void garbage_behind_the_end_is_noticed(void **state)
     struct text parts[] = {{"\x1F\x8B\x08\0\0\0\0\0\0\x03\x03\0\0\0\0\0\0\0\0\0", 20}, garbage};
     file_write(parts, 2);
     expect_input_error("behind nothing");
+    /* A gzip member with a long file name, which ends where a block of 256 KiB ends. */
+    enum { BLOCK_BYTES = 256 << 10 };
+    struct text member = {malloc(BLOCK_BYTES), BLOCK_BYTES};
+    memset(member.bytes, 'n', BLOCK_BYTES);
+    memcpy(member.bytes, "\x1F\x8B\x08\x08\0\0\0\0\0\x03", 10);
+    memcpy(member.bytes + BLOCK_BYTES - 11, "\0\x03\0\0\0\0\0\0\0\0\0", 11);
+    file_write(&member, 1);
+    expect_text(&member, 0);
+    file_write((struct text[]){member, garbage}, 2);
+    expect_input_error("behind a block");
+    free(member.bytes);
 }
 
 static void damage_is_noticed_or_harmless(void **state)
