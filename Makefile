@@ -21,26 +21,34 @@ UNITS = $(UNIT_SOURCES:%.c=$(BUILD)/%)
 all: $(BUILD)/windrow $(BUILD)/crawlgen $(BUILD)/libwindrow.a
 
 $(BUILD)/libwindrow.a: $(LIBRARY_OBJECTS)
-	rm -f $@ && $(AR) rcs $@ $^
+	@echo '  $@' && rm -f $@ && $(AR) rcs $@ $^
 
 $(BUILD)/windrow: $(WINDROW_OBJECTS) $(BUILD)/libwindrow.a
-	$(CC) $(ALL_CFLAGS) -o $@ $^ $(LIBRARIES)
+	@echo '  $@' && $(CC) $(ALL_CFLAGS) -o $@ $^ $(LIBRARIES)
 
 $(BUILD)/crawlgen: $(BUILD)/tools/crawlgen.o $(BUILD)/libwindrow.a
-	$(CC) $(ALL_CFLAGS) -o $@ $^ $(LIBRARIES)
+	@echo '  $@' && $(CC) $(ALL_CFLAGS) -o $@ $^ $(LIBRARIES)
 
 $(BUILD)/%.o: %.c
 	@mkdir -p $(@D)
-	$(CC) $(ALL_CFLAGS) -c -o $@ $<
+	@echo '  $@' && $(CC) $(ALL_CFLAGS) -c -o $@ $<
 
 $(BUILD)/tests/%_unit: $(BUILD)/tests/%_unit.o $(BUILD)/libwindrow.a
-	$(CC) $(ALL_CFLAGS) -o $@ $^ -lcmocka $(LIBRARIES)
+	@echo '  $@' && $(CC) $(ALL_CFLAGS) -o $@ $^ -lcmocka $(LIBRARIES)
+
+include tests/tests.mk
 
 units: $(UNITS)
+
+check:
+	scripts/check --no-setup --build $(BUILD)
+
+sanitize:
+	scripts/check --no-setup --sanitize --build $(BUILD)
 
 clean:
 	rm -rf $(BUILD)
 
-.PHONY: all units clean
+.PHONY: all units check sanitize clean
 .SECONDARY:
 -include $(shell find $(BUILD) -name '*.d' 2>/dev/null)

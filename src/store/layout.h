@@ -33,6 +33,8 @@ static inline void windrow_layout_block_file(char *name, size_t capacity, enum w
 
 /* For the floors that make, check and repair stores; answers use store/store.h. */
 const struct windrow_manifest *windrow_store_manifest(const struct windrow_store *store);
+/* Opens what the manifest (taken over, left empty) describes, without a seal: for the job that is about to set it. */
+enum windrow_status windrow_store_open_manifest(const char *path, struct windrow_manifest *manifest, struct windrow_store **store);
 struct windrow_page_reader;
 enum windrow_status windrow_page_reader_key(struct windrow_page_reader *reader, uint64_t page, const uint8_t **key, size_t *key_bytes);
 enum windrow_status windrow_page_reader_find_key(struct windrow_page_reader *reader, const char *key, size_t key_bytes, uint64_t *page);

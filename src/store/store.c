@@ -105,9 +105,25 @@ enum windrow_status windrow_store_open(const char *path, struct windrow_store **
     *out = NULL;
     if (!windrow_file_exists(path))
         return windrow_fail(WINDROW_USAGE, "there is no store at %s; make one with windrow shard", path);
+    struct windrow_manifest manifest;
+    enum windrow_status status = windrow_manifest_read(path, &manifest);
+    if (status == WINDROW_NO)
+        return windrow_fail(WINDROW_NO, "the store %s is not finished; run its windrow shard again to go on", path);
+    if (status)
+        return status;
+    status = windrow_store_open_manifest(path, &manifest, out);
+    windrow_manifest_free(&manifest);
+    return status;
+}
+
+enum windrow_status windrow_store_open_manifest(const char *path, struct windrow_manifest *manifest, struct windrow_store **out)
+{
+    *out = NULL;
     struct windrow_store *store = calloc(1, sizeof *store);
     if (!store)
         return memory();
+    store->manifest = *manifest;
+    *manifest = (struct windrow_manifest){0};
     for (int flat = 0; flat < FLAT_COUNT; flat++)
         store->flats[flat].descriptor = -1;
     enum windrow_status status = WINDROW_OK;
@@ -115,13 +131,6 @@ enum windrow_status windrow_store_open(const char *path, struct windrow_store **
         status = memory();
         goto out;
     }
-    status = windrow_manifest_read(path, &store->manifest);
-    if (status == WINDROW_NO) {
-        status = windrow_fail(WINDROW_NO, "the store %s is not finished; run its windrow shard again to go on", path);
-        goto out;
-    }
-    if (status)
-        goto out;
     for (int flat = 0; flat < FLAT_COUNT; flat++)
         if ((status = open_flat(store, flat)))
             goto out;
