@@ -10,8 +10,8 @@
 #include <cmocka.h>
 
 #include "store/block.h"
-#include "tests/common/graph.h"
-#include "tests/common/memory.h"
+#include "../common/graph.h"
+#include "../common/memory.h"
 
 /* The lists of a block, as the encoder takes them. */
 struct lists {
