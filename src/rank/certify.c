@@ -105,7 +105,7 @@ static enum windrow_status rim_barrier(void *context, uint64_t first, uint64_t e
         solver->own->rounding += slot->rounding;
     }
     windrow_solver_count_links(solver, WINDROW_BLOCK_RIM, first, end);
-    return WINDROW_OK;
+    return windrow_solver_stop_asked(solver);
 }
 
 /* ---- The core ------------------------------------------------------------------------------ */
@@ -169,7 +169,7 @@ static enum windrow_status core_barrier(void *context, uint64_t first, uint64_t 
         solver->own->rounding += slot->rounding;
     }
     windrow_solver_count_links(solver, WINDROW_BLOCK_CORE, first, end);
-    return WINDROW_OK;
+    return windrow_solver_stop_asked(solver);
 }
 
 /* ---- All together -------------------------------------------------------------------------- */
@@ -230,6 +230,21 @@ static void add_rim_classes(const struct windrow_solver *solver, const struct wi
     table->least_score = fmin(table->least_score, rim->least_score / scale * (1 - 1e-12));
 }
 
+/* What was expected and what was found tell how to expect the next time. */
+static double new_caution(double before, double expected, double found)
+{
+    if (!(expected > 0) || !isfinite(found))
+        return before;
+    return fmin(fmax(before * found / expected, 0.25), 64);
+}
+
+static void take_caution(struct windrow_solver *solver, const struct windrow_certificate *certificate)
+{
+    struct windrow_solver_state *state = &solver->state;
+    state->caution_error = new_caution(state->caution_error, windrow_solver_expected_error(solver), certificate->error_l1);
+    state->caution_rho = new_caution(state->caution_rho, windrow_solver_expected_rho(solver), certificate->rho);
+}
+
 enum windrow_status windrow_solver_certify(struct windrow_solver *solver, struct windrow_certificate *certificate)
 {
     const struct windrow_web *web = solver->options.web;
@@ -240,6 +255,7 @@ enum windrow_status windrow_solver_certify(struct windrow_solver *solver, struct
     double beta = solver->options.beta;
     clear_totals(solver);
     enum windrow_status status = windrow_streamer_run(own->streamer, WINDROW_BLOCK_RIM, 0, &rim_job);
+    solver->state.carry = (struct windrow_solver_carry){0};
     if (status)
         return status;
     join_workers(solver, &rim_table);
@@ -258,13 +274,16 @@ enum windrow_status windrow_solver_certify(struct windrow_solver *solver, struct
     }
 
     clear_totals(solver);
-    if ((status = windrow_streamer_run(own->streamer, WINDROW_BLOCK_CORE, 0, &core_job)))
-        return status;
+    status = windrow_streamer_run(own->streamer, WINDROW_BLOCK_CORE, 0, &core_job);
     solver->state.carry = (struct windrow_solver_carry){0};
+    if (status)
+        return status;
     join_workers(solver, &table);
     add_rim_classes(solver, &rim_table, &table);
     double rounding = own->rounding + rim_rounding / solver->scale + 16 * unit * rim_jump;
     double residual = own->total + own->total_error + rim_rounding / solver->scale + (fabs(own->jump_excess) + 16 * unit) * rim_jump * (1 + 1e-9);
     windrow_certificate_make(certificate, beta, &table, residual, rounding, 16 * unit);
+    solver->state.certifications++;
+    take_caution(solver, certificate);
     return WINDROW_OK;
 }

@@ -66,7 +66,7 @@ static enum windrow_status power_barrier(void *context, uint64_t first, uint64_t
             settle(power, record->first_target, power->piece_sum);
     }
     windrow_solver_count_links(power->solver, power->kind, first, end);
-    return WINDROW_OK;
+    return windrow_solver_stop_asked(power->solver);
 }
 
 enum windrow_status windrow_solver_power_sweep(struct windrow_solver *solver)

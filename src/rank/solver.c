@@ -93,7 +93,7 @@ enum windrow_status windrow_solver_create(const struct windrow_solver_options *o
         made->mixing.change_columns[c] = vector_take(&memory, floats);
         made->mixing.value_columns[c] = vector_take(&memory, floats);
     }
-    made->state.fall = 1;
+    made->state.fall = made->state.caution_error = made->state.caution_rho = 1;
     find_hosts_of_blocks(made);
     if ((status = windrow_streamer_create(web, options->crew, &own->streamer)))
         goto failed;
@@ -446,7 +446,7 @@ double windrow_solver_expected_error(const struct windrow_solver *solver)
     const struct windrow_solver_state *state = &solver->state;
     if (state->change_count == 0)
         return -1;
-    return change_before(state, 0) * next_fall(state) / (1 - solver->options.beta);
+    return state->caution_error * change_before(state, 0) * next_fall(state) / (1 - solver->options.beta);
 }
 
 double windrow_solver_expected_rho(const struct windrow_solver *solver)
@@ -455,5 +455,5 @@ double windrow_solver_expected_rho(const struct windrow_solver *solver)
     if (state->change_count == 0)
         return -1;
     double beta = solver->options.beta, terms = log((double)solver->options.web->pages / (1 - beta)) / -log(beta);
-    return state->change_relative * next_fall(state) * (terms + 1 / (1 - beta));
+    return state->caution_rho * state->change_relative * next_fall(state) * (terms + 1 / (1 - beta));
 }

@@ -53,7 +53,8 @@ struct windrow_solver_carry {
 
 /* Everything but the vectors: what a checkpoint holds besides them. */
 struct windrow_solver_state {
-    uint64_t sweeps;          /* finished ones */
+    uint64_t sweeps;          /* finished ones, without certifying passes */
+    uint64_t certifications;  /* certifying passes over the core */
     uint64_t next_block;      /* of the sweep going on; 0: it has not begun */
     uint64_t link_visits;     /* all passes, certifying ones included */
     uint64_t guarded;         /* the sweep after which the guard closed; 0: it has not */
@@ -61,6 +62,8 @@ struct windrow_solver_state {
     double changes[WINDROW_SOLVER_MEMORY_SWEEPS + 1]; /* sum of |change of y| of the last sweeps */
     double fall;              /* of the norm, as the last mixing foresaw */
     double change_relative;   /* largest |change| / value of the last sweep */
+    double caution_error;     /* how many times more the last certificate found than was expected */
+    double caution_rho;
     double dangling;          /* power: the mass of the dangling pages */
     struct windrow_solver_carry carry;
     struct windrow_mixing_state mixing;

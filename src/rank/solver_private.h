@@ -70,6 +70,14 @@ static inline void windrow_solver_count_links(struct windrow_solver *solver, enu
         windrow_meter_add(solver->options.meter, links);
 }
 
+/* WINDROW_STOPPED when somebody asked for it: passes that are done again from their beginning just end. */
+static inline enum windrow_status windrow_solver_stop_asked(const struct windrow_solver *solver)
+{
+    if (solver->options.meter && windrow_meter_stopping(solver->options.meter))
+        return windrow_fail(WINDROW_STOPPED, "stopped");
+    return WINDROW_OK;
+}
+
 void windrow_solver_remember_change(struct windrow_solver *solver, double change);
 enum windrow_status windrow_solver_power_sweep(struct windrow_solver *solver);
 
