@@ -6,6 +6,7 @@
 
 #include <stdlib.h>
 #include <string.h>
+#include <sys/mman.h>
 #include <xxhash.h>
 
 /* What a batch keeps in memory:
@@ -24,6 +25,10 @@ struct slot {
 
 #define WAITING 64 /* targets looked up together, so that their cache misses overlap */
 
+/* Most targets were met a moment ago (navigation links, neighbours): a table small enough for the processor's cache
+ * remembers where, and spares them the large one. */
+#define RECENT 8192
+
 struct windrow_batch {
     uint64_t memory_bytes;
     uint8_t *arena;
@@ -40,11 +45,15 @@ struct windrow_batch {
     size_t link_count;
 
     size_t open_line;          /* index in lines of the current source; SIZE_MAX: none */
+    struct slot *recent;       /* RECENT of them; place 0: free */
     struct windrow_buffer waiting_keys;
     uint64_t waiting_hash[WAITING];
     uint32_t waiting_at[WAITING], waiting_bytes[WAITING];
+    uint32_t waiting_id[WAITING]; /* FROM_TABLE: still to be looked up */
     size_t waiting;
 };
+
+#define FROM_TABLE UINT32_MAX
 
 static const uint8_t *record_key(const struct windrow_batch *batch, uint32_t place)
 {
@@ -58,11 +67,29 @@ static uint32_t record_word(const struct windrow_batch *batch, uint32_t place, u
     return value;
 }
 
+static bool record_is(const struct windrow_batch *batch, uint32_t place, const char *key, size_t key_bytes)
+{
+    return record_word(batch, place, 1) == key_bytes && memcmp(record_key(batch, place), key, key_bytes) == 0;
+}
+
 /* Bytes that filling and writing take with the current contents. */
 static uint64_t memory_in_use(const struct windrow_batch *batch)
 {
     return batch->arena_bytes + batch->slot_count * sizeof(struct slot) + (uint64_t)batch->page_count * (4 + 1 + 16 + 4 + 4 + 4) +
            (uint64_t)batch->line_words * 4 + (uint64_t)batch->link_count * 4 + (uint64_t)batch->line_count * 8;
+}
+
+/* An empty hash table. It is looked into at random, so it asks for large pages: fewer address translations miss. */
+static struct slot *table(size_t count)
+{
+    size_t bytes = count * sizeof(struct slot), large = (size_t)2 << 20;
+    struct slot *slots = bytes >= large ? aligned_alloc(large, bytes) : malloc(bytes);
+    if (!slots)
+        return NULL;
+    if (bytes >= large)
+        madvise(slots, bytes, MADV_HUGEPAGE);
+    memset(slots, 0, bytes);
+    return slots;
 }
 
 enum windrow_status windrow_batch_create(uint64_t memory_bytes, struct windrow_batch **out)
@@ -78,8 +105,9 @@ enum windrow_status windrow_batch_create(uint64_t memory_bytes, struct windrow_b
     while (batch->slot_count * 160 < memory_bytes && batch->slot_count < ((size_t)1 << 31))
         batch->slot_count *= 2;
     batch->page_limit = batch->slot_count / 4 * 3;
-    batch->slots = calloc(batch->slot_count, sizeof *batch->slots);
-    if (!batch->slots) {
+    batch->slots = table(batch->slot_count);
+    batch->recent = calloc(RECENT, sizeof *batch->recent);
+    if (!batch->slots || !batch->recent) {
         windrow_batch_destroy(batch);
         return windrow_fail(WINDROW_RESOURCE, "out of memory for a batch of %llu bytes; try a smaller --memory", (unsigned long long)memory_bytes);
     }
@@ -95,6 +123,7 @@ void windrow_batch_destroy(struct windrow_batch *batch)
     free(batch->places);
     free(batch->crawled);
     free(batch->slots);
+    free(batch->recent);
     free(batch->lines);
     windrow_buffer_free(&batch->waiting_keys);
     free(batch);
@@ -130,7 +159,7 @@ static enum windrow_status rehash(struct windrow_batch *batch)
 {
     /* Only when a single line holds more pages than the batch was planned for. */
     size_t count = batch->slot_count * 2;
-    struct slot *slots = calloc(count, sizeof *slots);
+    struct slot *slots = table(count);
     if (!slots)
         return windrow_fail(WINDROW_RESOURCE, "out of memory while filling a batch; try a smaller --memory");
     for (size_t page = 0; page < batch->page_count; page++) {
@@ -192,8 +221,7 @@ enum windrow_status windrow_batch_source(struct windrow_batch *batch, const char
 {
     if (batch->open_line != SIZE_MAX) {
         /* The same source as on the line before: its links simply go on. */
-        uint32_t place = batch->places[batch->lines[batch->open_line]];
-        if (record_word(batch, place, 1) == key_bytes && memcmp(record_key(batch, place), key, key_bytes) == 0)
+        if (record_is(batch, batch->places[batch->lines[batch->open_line]], key, key_bytes))
             return WINDROW_OK;
     }
     uint32_t id;
@@ -216,16 +244,21 @@ static enum windrow_status look_up_waiting(struct windrow_batch *batch)
     if (status)
         return status;
     for (size_t index = 0; index < batch->waiting; index++) {
+        if (batch->waiting_id[index] != FROM_TABLE)
+            continue;
         const struct slot *slot = &batch->slots[batch->waiting_hash[index] & (batch->slot_count - 1)];
         if (slot->place)
             __builtin_prefetch(batch->arena + (size_t)(slot->place - 1) * 8);
     }
     for (size_t index = 0; index < batch->waiting; index++) {
-        uint32_t id;
-        status = find_or_add(batch, (const char *)batch->waiting_keys.data + batch->waiting_at[index], batch->waiting_bytes[index],
-                             batch->waiting_hash[index], &id);
-        if (status)
-            return status;
+        uint32_t id = batch->waiting_id[index];
+        if (id == FROM_TABLE) {
+            uint64_t hash = batch->waiting_hash[index];
+            status = find_or_add(batch, (const char *)batch->waiting_keys.data + batch->waiting_at[index], batch->waiting_bytes[index], hash, &id);
+            if (status)
+                return status;
+            batch->recent[hash % RECENT] = (struct slot){(uint32_t)(hash >> 32), batch->places[id] + 1};
+        }
         batch->lines[batch->line_words++] = id;
     }
     batch->lines[batch->open_line + 1] += (uint32_t)batch->waiting;
@@ -237,20 +270,24 @@ static enum windrow_status look_up_waiting(struct windrow_batch *batch)
 
 enum windrow_status windrow_batch_target(struct windrow_batch *batch, const char *key, size_t key_bytes, bool *self)
 {
-    uint32_t source_place = batch->places[batch->lines[batch->open_line]];
-    *self = record_word(batch, source_place, 1) == key_bytes && memcmp(record_key(batch, source_place), key, key_bytes) == 0;
+    *self = record_is(batch, batch->places[batch->lines[batch->open_line]], key, key_bytes);
     if (*self)
         return WINDROW_OK;
     uint64_t hash = XXH3_64bits(key, key_bytes);
-    __builtin_prefetch(&batch->slots[hash & (batch->slot_count - 1)]);
-    size_t index = batch->waiting;
-    batch->waiting_hash[index] = hash;
-    batch->waiting_at[index] = (uint32_t)batch->waiting_keys.bytes;
-    batch->waiting_bytes[index] = (uint32_t)key_bytes;
-    enum windrow_status status = windrow_buffer_append(&batch->waiting_keys, key, key_bytes);
-    if (status)
-        return status;
-    batch->waiting++;
+    size_t index = batch->waiting++;
+    const struct slot *recent = &batch->recent[hash % RECENT];
+    if (recent->place && recent->tag == (uint32_t)(hash >> 32) && record_is(batch, recent->place - 1, key, key_bytes)) {
+        batch->waiting_id[index] = record_word(batch, recent->place - 1, 0);
+    } else {
+        __builtin_prefetch(&batch->slots[hash & (batch->slot_count - 1)]);
+        batch->waiting_id[index] = FROM_TABLE;
+        batch->waiting_hash[index] = hash;
+        batch->waiting_at[index] = (uint32_t)batch->waiting_keys.bytes;
+        batch->waiting_bytes[index] = (uint32_t)key_bytes;
+        enum windrow_status status = windrow_buffer_append(&batch->waiting_keys, key, key_bytes);
+        if (status)
+            return status;
+    }
     return batch->waiting == WAITING ? look_up_waiting(batch) : WINDROW_OK;
 }
 
@@ -394,6 +431,7 @@ enum windrow_status windrow_batch_write(struct windrow_batch *batch, const char 
     if ((status = write_keys(batch, order, degrees, key_path)))
         goto out;
     memset(batch->slots, 0, batch->slot_count * sizeof *batch->slots);
+    memset(batch->recent, 0, RECENT * sizeof *batch->recent);
     batch->arena_bytes = 0;
     batch->page_count = 0;
     batch->line_words = batch->line_count = batch->link_count = 0;
