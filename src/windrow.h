@@ -81,6 +81,7 @@ struct windrow_shard_options {
     unsigned threads;
     const char *temporary;       /* directory for scratch; NULL: inside the store */
     const char *aliases;         /* file of FROM TAB TO lines; NULL: none */
+    const char *add;             /* earlier store to grow from: its pages stay unless the dumps fetched them again; NULL: none */
     bool keep_nofollow;
     double bad_max;              /* largest share of malformed URL fields, 0 to 1 */
     struct windrow_watch watch;

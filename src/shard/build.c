@@ -4,6 +4,7 @@
 #include "shard/alias.h"
 #include "shard/job.h"
 #include "shard/linkmerge.h"
+#include "shard/old.h"
 #include "shard/part.h"
 #include "shard/reading.h"
 #include "shard/remap.h"
@@ -44,6 +45,7 @@ struct job {
     struct windrow_crew *crew;
     struct windrow_meter meter;
     struct windrow_alias *alias;
+    struct windrow_store *old;           /* the earlier store; NULL: none */
     struct windrow_reading_state reading;
     uint64_t *run_pages;
     struct windrow_part_plan plan;
@@ -149,6 +151,27 @@ static enum windrow_status load_runs(struct job *job)
     return status;
 }
 
+/* The earlier store becomes the last run. Its record and the higher count of runs are one commit. */
+static enum windrow_status add_old(struct job *job)
+{
+    struct windrow_old_counts counts;
+    enum windrow_status status = windrow_ledger_get(job->ledger, "old", &counts, sizeof counts);
+    if (status != WINDROW_NO)
+        return status;
+    windrow_meter_stage(&job->meter, "reading the earlier store", "links", 2 * windrow_store_facts(job->old)->links);
+    status = windrow_old_write(job->old, job->scratch, job->reading.run_count, NULL, NULL, job->memory_bytes, &job->meter, &counts);
+    windrow_meter_stage_end(&job->meter);
+    if (status || (status = windrow_directory_sync(job->scratch)))
+        return status;
+    char key[32];
+    snprintf(key, sizeof key, "run/%06llu", (unsigned long long)job->reading.run_count++);
+    job->reading.links += counts.links;
+    job->reading.run_pages += counts.pages;
+    struct windrow_ledger_record records[] = {{"old", &counts, sizeof counts}, {key, &counts.pages, sizeof counts.pages},
+                                              {"reading", &job->reading, sizeof job->reading}};
+    return windrow_ledger_commit(job->ledger, records, 3);
+}
+
 static enum windrow_status read_dumps(struct job *job)
 {
     enum windrow_status status = windrow_ledger_get(job->ledger, "reading", &job->reading, sizeof job->reading);
@@ -161,6 +184,8 @@ static enum windrow_status read_dumps(struct job *job)
         status = windrow_reading_run(&reading, &job->reading);
         windrow_meter_stage_end(&job->meter);
     }
+    if (!status && job->old)
+        status = add_old(job);
     return status ? status : load_runs(job);
 }
 
@@ -460,25 +485,27 @@ static enum windrow_status finish(struct job *job)
 /* ---- The job ---- */
 
 /* What must stay the same when a job is gone on with. Names of dumps, not their contents: those are checked as they are read. */
-static uint64_t settings_fingerprint(const struct windrow_shard_options *options, const struct windrow_alias *alias)
+static uint64_t settings_fingerprint(const struct windrow_shard_options *options, const struct windrow_alias *alias, const struct windrow_store *old)
 {
     uint64_t sum = XXH3_64bits_withSeed(&options->shape, sizeof options->shape, options->keep_nofollow);
     for (size_t dump = 0; dump < options->dump_count; dump++)
         sum = XXH3_64bits_withSeed(options->dumps[dump], strlen(options->dumps[dump]) + 1, sum);
+    if (old)
+        sum = XXH3_64bits_withSeed(&windrow_store_facts(old)->fingerprint, sizeof(uint64_t), sum);
     uint64_t aliases = alias ? windrow_alias_fingerprint(alias) : 0;
     return XXH3_64bits_withSeed(&aliases, sizeof aliases, sum);
 }
 
 static enum windrow_status check_settings(struct job *job)
 {
-    uint64_t now = settings_fingerprint(job->options, job->alias), then;
+    uint64_t now = settings_fingerprint(job->options, job->alias, job->old), then;
     enum windrow_status status = windrow_ledger_get(job->ledger, "settings", &then, sizeof then);
     if (status == WINDROW_NO) {
         struct windrow_ledger_record record = {"settings", &now, sizeof now};
         return windrow_ledger_commit(job->ledger, &record, 1);
     }
     if (!status && now != then)
-        status = windrow_fail(WINDROW_USAGE, "%s was begun from other dumps or with other settings (--shape, --nofollow, --aliases); name another --out, "
+        status = windrow_fail(WINDROW_USAGE, "%s was begun from other dumps or with other settings (--shape, --nofollow, --aliases, --add); name another --out, "
                                              "or remove it first", job->store);
     return status;
 }
@@ -510,6 +537,8 @@ static enum windrow_status open_job(struct job *job)
         if ((status = windrow_alias_load(job->options->aliases, &job->alias, &bad_lines)))
             goto out;
     }
+    if (job->options->add && (status = windrow_store_open(job->options->add, &job->old)))
+        goto out;
     if ((status = check_settings(job)) || (status = windrow_directory_make(job->scratch)) || (status = windrow_directory_make(pages_path)) ||
         (status = windrow_directory_make(links_path)))
         goto out;
@@ -527,6 +556,7 @@ static void close_job(struct job *job)
     windrow_ledger_close(job->ledger);
     windrow_crew_destroy(job->crew);
     windrow_alias_free(job->alias);
+    windrow_store_close(job->old);
     windrow_part_plan_free(&job->plan);
     windrow_meter_finish(&job->meter);
     if (job->lock >= 0)
