@@ -186,6 +186,7 @@ extern const char *const windrow_state_names[WINDROW_STATES];
 
 struct windrow_standing {
     enum windrow_state state;
+    const char *stage;          /* of a store that is not whole yet: what is, or was, being done; else NULL */
     bool sharded;               /* the store is whole: the next eight lines are known */
     uint64_t pages;
     uint64_t crawled_pages;
@@ -215,7 +216,8 @@ struct windrow_standing {
 enum windrow_status windrow_standing_read(const char *store, const char *run, struct windrow_standing *standing);
 
 /* Reads a store and all its runs back against checksums, counts and invariants. Calls `found` (never two
- * calls at once) with a line for each damage; WINDROW_NO when there was any. WINDROW_USAGE: no store. */
+ * calls at once) with a line for each damage; WINDROW_NO when there was any, or when the store is not
+ * finished. `threads`: 0 for as many as there are processors. WINDROW_USAGE: no store. */
 enum windrow_status windrow_verify(const char *store, unsigned threads, void (*found)(void *context, const char *damage),
                                    void *context, const struct windrow_watch *watch);
 

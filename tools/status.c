@@ -97,6 +97,8 @@ static enum windrow_status print_json(const struct windrow_standing *standing)
 static void print_plain(const struct windrow_standing *standing)
 {
     printf("state           %s\n", windrow_state_names[standing->state]);
+    if (standing->stage)
+        printf("stage           %s\n", standing->stage);
     if (standing->sharded) {
         printf("pages           %s, %s of them crawled, %s dangling\n", grouped(standing->pages), grouped(standing->crawled_pages),
                grouped(standing->dangling_pages));
