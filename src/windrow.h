@@ -70,17 +70,19 @@ struct windrow_watch {
 
 /* ---- Sharding ------------------------------------------------------------------------------ */
 
-enum windrow_shape { WINDROW_SHAPE_AUTO, WINDROW_SHAPE_PAIRS, WINDROW_SHAPE_LISTS };
+enum windrow_shape { WINDROW_SHAPE_AUTO, WINDROW_SHAPE_PAIRS, WINDROW_SHAPE_LISTS, WINDROW_SHAPE_IDS };
 
 struct windrow_shard_options {
     const char *out;             /* the store's directory; made when missing */
-    const char *const *dumps;    /* paths, or "-" for standard input */
+    const char *const *dumps;    /* files, directories (all their files), "@FILE" (a list of paths), or "-" for standard input */
     size_t dump_count;
     enum windrow_shape shape;
     uint64_t memory_bytes;       /* promise about peak resident memory */
     unsigned threads;
     const char *temporary;       /* directory for scratch; NULL: inside the store */
     const char *aliases;         /* file of FROM TAB TO lines; NULL: none */
+    const char *names;           /* file of ID TAB URL-or-host lines, for dumps of ids; NULL: none */
+    const char *drop;            /* file of URLs and hosts that are to be left out; NULL: none */
     const char *add;             /* earlier store to grow from: its pages stay unless the dumps fetched them again; NULL: none */
     bool keep_nofollow;
     double bad_max;              /* largest share of malformed URL fields, 0 to 1 */
@@ -89,7 +91,7 @@ struct windrow_shard_options {
 
 /* Why a link was dropped, in the order in which the reasons are tried. */
 enum windrow_drop { WINDROW_DROP_MALFORMED, WINDROW_DROP_SCHEME, WINDROW_DROP_NOFOLLOW, WINDROW_DROP_SELF,
-                    WINDROW_DROP_DUPLICATE, WINDROW_DROP_COUNT };
+                    WINDROW_DROP_DUPLICATE, WINDROW_DROP_TAKEDOWN, WINDROW_DROP_COUNT };
 extern const char *const windrow_drop_names[WINDROW_DROP_COUNT];
 
 void windrow_shard_defaults(struct windrow_shard_options *options);

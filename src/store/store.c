@@ -13,7 +13,7 @@
 #include <xxhash.h>
 #include <zstd.h>
 
-const char *const windrow_drop_names[WINDROW_DROP_COUNT] = {"malformed", "scheme", "nofollow", "self", "duplicate"};
+const char *const windrow_drop_names[WINDROW_DROP_COUNT] = {"malformed", "scheme", "nofollow", "self", "duplicate", "takedown"};
 
 /* The flat files of a store, in the order of their names below. */
 enum flat { PAGE_INDEX, PAGE_KEYS, HOSTS, HOST_NAMES, CORE_MAP, DEGREES, INSIDE_DEGREES, ALIAS_INDEX, ALIAS_KEYS, FLAT_COUNT };
