@@ -657,7 +657,10 @@ uint64_t windrow_order_reaching(const struct windrow_order *order, double score)
 
 uint64_t windrow_order_place(const struct windrow_order *order, double score, uint64_t page)
 {
-    uint64_t first = windrow_order_above(order, score), ties_end = windrow_order_reaching(order, score), end = ties_end;
+    uint64_t first = windrow_order_above(order, score);
+    if (first == order->header.pages)
+        return 0;
+    uint64_t ties_end = windrow_order_count(order, is_reaching, &score, first + 1), end = ties_end;
     while (first < end) {
         uint64_t middle = first + (end - first) / 2;
         if (id_at(order, middle) < page)
