@@ -206,7 +206,7 @@ struct windrow_standing {
     double alpha;               /* no score is off by more */
     double rho;                 /* nor by more than this share of itself */
     double digits;
-    double elapsed_seconds;     /* of the job that is or was at work last */
+    double elapsed_seconds;     /* of the job that is or was at work last; 0 while the store is not whole */
     double seconds_left;        /* 0 when it is done; negative: unknown */
     uint64_t peak_memory_bytes; /* 0: unknown */
     uint64_t store_bytes;       /* on disk, runs included */

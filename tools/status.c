@@ -73,7 +73,7 @@ static enum windrow_status print_json(const struct windrow_standing *standing)
         {"alpha", number_or_null(certified, standing->alpha)},
         {"rho", number_or_null(certified, standing->rho)},
         {"digits", number_or_null(certified, standing->digits)},
-        {"elapsed_seconds", number_or_null(true, standing->elapsed_seconds)},
+        {"elapsed_seconds", number_or_null(sharded, standing->elapsed_seconds)},
         {"seconds_left", number_or_null(standing->seconds_left >= 0, standing->seconds_left)},
         {"peak_memory_bytes", count_or_null(standing->peak_memory_bytes > 0, standing->peak_memory_bytes)},
         {"store_bytes", count_or_null(true, standing->store_bytes)},
@@ -115,7 +115,8 @@ static void print_plain(const struct windrow_standing *standing)
     if (standing->certified)
         printf("proven          %s digits of every score; error_l1 %.3g, alpha %.3g, rho %.3g\n", proven_digits(standing->digits), standing->error_l1,
                standing->alpha, standing->rho);
-    printf("elapsed         %.1f s\n", standing->elapsed_seconds);
+    if (standing->sharded)
+        printf("elapsed         %.1f s\n", standing->elapsed_seconds);
     if (standing->state != WINDROW_STATE_FINISHED && standing->state != WINDROW_STATE_SHARDED) {
         if (standing->seconds_left >= 0)
             printf("left            %.0f s\n", standing->seconds_left);
