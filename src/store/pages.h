@@ -1,4 +1,4 @@
-/* pages: the page table, id <-> page key, in zstd frames of some 4,096 keys (layout: FORMAT.md).
+/* pages: the page table, id <-> page key, in zstd frames of some 16,384 keys (layout: FORMAT.md).
  *
  * A frame holds the keys front-coded: what a key shares with the one before, how long the rest is, and
  * the rests, each kind together, which compresses better than mixing them. Each key may carry a number
@@ -16,8 +16,8 @@
 #include <zstd.h>
 
 /* A frame is closed at so many keys, or before its keys would outgrow so many bytes: decoding one never takes much. */
-#define WINDROW_PAGES_FRAME_KEYS 4096
-#define WINDROW_PAGES_FRAME_BYTES (1u << 20)
+#define WINDROW_PAGES_FRAME_KEYS 16384
+#define WINDROW_PAGES_FRAME_BYTES (4u << 20)
 
 /* One entry of the index, as the file page-index holds it (little-endian). The last entry of a table is a sentinel:
  * first_entry is the number of all entries, key_at the length of all first keys. */
