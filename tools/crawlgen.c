@@ -146,6 +146,24 @@ static void link_outside(const struct model *model, struct piece *piece, const s
     link_position(model, piece, &host, position, random >> 40);
 }
 
+/* A page's own list seldom names the navigation pages, to which it links anyway. */
+static inline uint64_t beyond_navigation(const struct host *host, uint64_t position, uint64_t known)
+{
+    return position < host->navigation && position + host->navigation < known ? position + host->navigation : position;
+}
+
+/* The side bar: every page of a section links to the first pages of that section, fetched or not. */
+static void sidebar_write(const struct model *model, struct piece *piece, struct host *host, uint64_t position, uint64_t extent)
+{
+    uint64_t first = position >> host->section_bits << host->section_bits;
+    uint64_t known = host->closed ? extent : extent + host->block / 2 + 2;
+    for (uint64_t item = 0; item < host->sidebar; item++) {
+        uint64_t target = first + item;
+        if (target >= host->navigation && target < known && target != position)
+            link_position(model, piece, host, target, 255);
+    }
+}
+
 /* Writes `count` links of the list that belongs to `owner`, a position of the host. */
 static void list_write(const struct model *model, struct piece *piece, struct host *host, uint64_t owner,
                        uint64_t count, uint64_t extent)
@@ -155,12 +173,12 @@ static void list_write(const struct model *model, struct piece *piece, struct ho
         uint64_t random = draw(&state);
         uint32_t choice = random & 1023;
         random >>= 10;
-        if (choice < 340 && !host->inward) {
+        if (choice < 360 && !host->inward) {
             link_outside(model, piece, host, &state);
-        } else if (choice < 850) {
+        } else if (choice < 880) {
             /* near neighbours: at a distance of 1 + up to 2^b, b geometric; long lists reach further */
-            uint64_t reach = UINT64_C(4) << __builtin_ctzll((random >> 32) | 128);
-            while (reach < count / 4)
+            uint64_t reach = UINT64_C(2) << __builtin_ctzll((random >> 32) | 64);
+            while (reach < count / 2)
                 reach <<= 1;
             uint64_t distance = 1 + (random & (reach - 1));
             /* A little beyond what was visited so far there are pages, too; in closed hosts there are none. */
@@ -170,12 +188,12 @@ static void list_write(const struct model *model, struct piece *piece, struct ho
                 position = owner - distance;
             if (position >= known)
                 position = 0;
-            link_position(model, piece, host, position, random >> 16);
-        } else if (choice < 900) {
+            link_position(model, piece, host, beyond_navigation(host, position, known), random >> 16);
+        } else if (choice < 920) {
             link_position(model, piece, host, owner >> host->section_bits << host->section_bits, random);
         } else if (choice < 1000) {
-            link_position(model, piece, host, below_skewed(random, extent, 2), random >> 32);
-        } else if (choice < 1022) {
+            link_position(model, piece, host, beyond_navigation(host, below_skewed(random, extent, 2), extent), random >> 32);
+        } else if (choice < 1021) {
             if (piece->last_bytes) {
                 char again[URL_BYTES_MAX];
                 memcpy(again, piece->last, piece->last_bytes);
@@ -259,11 +277,12 @@ static void page_write(const struct model *model, struct piece *piece, struct ho
             link_position(model, piece, host, position - 1, random >> 24);
     } else {
         navigation_write(piece, navigation, host->navigation);
-        uint64_t count = (5 + (random & 7)) << doublings(random >> 8, 20000, 9);
+        sidebar_write(model, piece, host, position, extent);
+        uint64_t count = (3 + (random & 3)) << doublings(random >> 8, 20000, 9);
         if (count > LINKS_PER_PAGE_MAX)
             count = LINKS_PER_PAGE_MAX;
-        uint64_t copied = 0, distance = 1 + (random >> 24 & 7);
-        if ((random >> 28 & 7) < 3 && position >= distance) {
+        uint64_t copied = 0, distance = 1 + (random >> 24 & 3);
+        if ((random >> 28 & 7) < 5 && position >= distance) {
             copied = count * 3 / 4;
             list_write(model, piece, host, position - distance, copied, extent);
         }

@@ -22,8 +22,8 @@
  *   into sections (directories). The first few positions are the host's navigation pages, 0 is its
  *   home page; position 0 of a section is its index. A hash decides whether a position is fetched
  *   or stays in the frontier.
- * Links.  A fetched page links to all navigation pages of its host, and has a list of its own whose
- *   length has a heavy tail. A list may be copied in part from an earlier page (the copying model of
+ * Links.  A fetched page links to all navigation pages of its host, to the first pages of its section
+ *   (the side bar of a template), and has a list of its own whose length has a heavy tail. A list may be copied in part from an earlier page (the copying model of
  *   Kumar, Raghavan, Rajagopalan, Sivakumar, Tomkins & Upfal 2000). Its links go to near neighbours in
  *   path order, the section's index, older positions of the host, or other hosts.
  * Links between hosts.  Slot by a fixed table with a Zipf law (Zipf 1949); round of the host as
@@ -136,6 +136,7 @@ struct host {
     uint64_t visits;     /* visits in its whole life */
     uint64_t block;      /* positions in a visit */
     uint64_t navigation; /* navigation pages */
+    uint64_t sidebar;    /* pages of a section in its side bar */
     uint32_t section_bits;
     uint32_t style;
     bool inward; /* no link leaves it, and most of it is fetched */
@@ -303,7 +304,8 @@ static void host_make(const struct model *model, struct host *host, uint32_t slo
     uint32_t spread = doublings(random, 26000, class < 5 ? 8 : 2);
     uint64_t base = class_block[class];
     host->block = ((base + below(random >> 16, base + 1)) << spread) - base / 2;
-    host->navigation = 1 + below_skewed(random >> 20, NAVIGATION_MAX, 1);
+    host->navigation = 4 + below(random >> 20, NAVIGATION_MAX - 3);
+    host->sidebar = 2 + (random >> 60 & 7);
     if (host->navigation > 1 + host->block / 2)
         host->navigation = 1 + host->block / 2;
     host->section_bits = 4 + (random >> 52 & 3);
@@ -371,11 +373,12 @@ static char *put_path(const struct model *model, struct host *host, char *to, ui
         to = put_word(model, to, random >> 32);
         return PUT_LITERAL(to, ".html");
     case 3:
+        to = put_two_digits(to, item / 10);
+        to = put_number(to, item % 10);
+        *to++ = '-';
         to = put_word(model, to, random);
         *to++ = '-';
-        to = put_word(model, to, random >> 32);
-        *to++ = '-';
-        return put_number(to, item);
+        return put_word(model, to, random >> 32);
     case 4:
         to = PUT_LITERAL(to, "view.php?id=");
         to = put_number(to, 10000 + position);
