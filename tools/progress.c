@@ -2,9 +2,10 @@
 
 #include "command.h"
 
+#include <math.h>
 #include <signal.h>
-#include <string.h>
 #include <stdlib.h>
+#include <string.h>
 #include <sys/ioctl.h>
 #include <time.h>
 #include <unistd.h>
@@ -64,30 +65,35 @@ static void write_line(char *line, size_t line_bytes, const struct windrow_progr
     write_amount(total, sizeof total, (double)now->total);
     write_amount(rate, sizeof rate, now->rate);
     const char *unit = now->unit ? now->unit : "";
+    const char *between = ": ";
 #define ADD(...) \
     do { \
         int added = snprintf(line + used, line_bytes - used, __VA_ARGS__); \
         used += added < 0 ? 0 : (size_t)added < line_bytes - used ? (size_t)added : line_bytes - used - 1; \
     } while (0)
+#define ADD_PART(format, ...) \
+    do { \
+        ADD("%s" format, between, __VA_ARGS__); \
+        between = ", "; \
+    } while (0)
     ADD("%s%s", atomic_load(&stop_wished) ? "stopping at the next checkpoint; " : "", now->stage ? now->stage : "");
     if (now->sweep)
         ADD(" %llu", (unsigned long long)now->sweep);
     if (now->share >= 0)
-        ADD(": %.0f %%", 100 * (now->share < 1 ? now->share : 1));
-    else
-        ADD(":");
+        ADD_PART("%.0f %%", floor(100 * (now->share < 1 ? now->share : 1)));
     if (now->seconds_left >= 0 && !now->stage_ended) {
         write_seconds(left, sizeof left, now->seconds_left);
-        ADD("%s %s left", now->share >= 0 ? "," : "", left);
+        ADD_PART("%s left", left);
     }
     if (now->error_l1 >= 0)
-        ADD(", error %.1e", now->error_l1);
+        ADD_PART("error %.1e", now->error_l1);
     if (now->total)
-        ADD(", %s of %s %s", done, total, unit);
+        ADD_PART("%s of %s %s", done, total, unit);
     else
-        ADD(" %s %s", done, unit);
+        ADD_PART("%s %s", done, unit);
     if (now->rate > 0)
-        ADD(", %s/s", rate);
+        ADD_PART("%s/s", rate);
+#undef ADD_PART
 #undef ADD
 }
 
