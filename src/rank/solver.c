@@ -7,6 +7,10 @@
 #include <string.h>
 #include <sys/mman.h>
 
+/* Updates of a host again in a sweep, at most; and how many times the average change on a link one must bring. */
+enum { INNER_PASSES_MOST = 8, INNER_FROM = 3 };
+static const double WORTH = 2;
+
 /* ---- Making -------------------------------------------------------------------------------- */
 
 static uint64_t rim_pages(const struct windrow_web *web)
@@ -22,7 +26,8 @@ static uint64_t rounded(uint64_t bytes)
 static uint64_t vector_bytes(const struct windrow_web *web)
 {
     return rounded(web->core_pages * sizeof(double)) + rounded(rim_pages(web) * sizeof(double)) +
-           (1 + 2 * WINDROW_MIXING_COLUMNS) * rounded(web->core_pages * sizeof(float));
+           (1 + 2 * WINDROW_MIXING_COLUMNS) * rounded(web->core_pages * sizeof(float)) +
+           rounded(web->host_count) + rounded(web->block_count[WINDROW_BLOCK_CORE]);
 }
 
 uint64_t windrow_solver_memory_bytes(const struct windrow_web *web)
@@ -93,6 +98,8 @@ enum windrow_status windrow_solver_create(const struct windrow_solver_options *o
         made->mixing.change_columns[c] = vector_take(&memory, floats);
         made->mixing.value_columns[c] = vector_take(&memory, floats);
     }
+    made->host_passes = vector_take(&memory, web->host_count);
+    made->block_passes = vector_take(&memory, web->block_count[WINDROW_BLOCK_CORE]);
     made->state.fall = made->state.caution_error = made->state.caution_rho = 1;
     find_hosts_of_blocks(made);
     if ((status = windrow_streamer_create(web, options->crew, &own->streamer)))
@@ -138,6 +145,8 @@ unsigned windrow_solver_vectors(struct windrow_solver *solver, struct windrow_so
         vectors[count++] = (struct windrow_solver_vector){solver->mixing.change_columns[c], floats};
         vectors[count++] = (struct windrow_solver_vector){solver->mixing.value_columns[c], floats};
     }
+    vectors[count++] = (struct windrow_solver_vector){solver->host_passes, solver->options.web->host_count};
+    vectors[count++] = (struct windrow_solver_vector){solver->block_passes, solver->options.web->block_count[WINDROW_BLOCK_CORE]};
     if (solver->options.method == WINDROW_METHOD_POWER)
         vectors[count++] = (struct windrow_solver_vector){solver->rim, rim_pages(solver->options.web) * sizeof(double)};
     return count;
@@ -178,26 +187,43 @@ static void add_flows(const struct windrow_solver *solver, const struct windrow_
     }
 }
 
-/* Scales the hosts that lie wholly between two targets of a block. */
-static void balance_inside(const struct windrow_solver *solver, uint64_t host, const struct windrow_kernel *kernel, double *values,
-                           uint32_t target_first, uint32_t target_end)
+/* Scales the targets of a host that lies wholly in the block. */
+static void balance_inside(const struct windrow_solver *solver, const struct windrow_kernel *kernel, double *values, uint32_t first, uint32_t end)
 {
-    const struct windrow_web *web = solver->options.web;
-    uint64_t first = kernel->block.first_target;
-    while (web->host_first_core(web->context, host) < first + target_first)
-        host++;
-    for (uint32_t t = target_first; t < target_end;) {
-        uint32_t end = (uint32_t)(web->host_first_core(web->context, ++host) - first);
-        double inflow = 0, kept = 0;
-        if (end - t > 1) {
-            add_flows(solver, kernel, values, t, end, &inflow, &kept);
-            double factor = inflow / kept;
-            if (kept > 0 && isfinite(factor))
-                for (uint32_t i = t; i < end; i++)
-                    values[i] *= factor;
-        }
-        t = end;
+    double inflow = 0, kept = 0;
+    if (end - first < 2)
+        return;
+    add_flows(solver, kernel, values, first, end, &inflow, &kept);
+    double factor = inflow / kept;
+    if (kept > 0 && isfinite(factor))
+        for (uint32_t t = first; t < end; t++)
+            values[t] *= factor;
+}
+
+/* Updates the targets of one host, and again `*passes` times. Passes are added where that is worth it: where
+ * a pass over near links still changes much beside what a sweep changes on the average link. Slow structures
+ * inside a host, such as long chains of pages, would else hold up the whole. Passes are never taken back,
+ * since mixing wants every sweep to do the same. */
+static enum windrow_status relax_host(const struct windrow_solver *solver, struct windrow_kernel *kernel, const struct windrow_relaxation *relaxation,
+                                      struct windrow_near_cursor *cursor, uint32_t first, uint32_t end, bool balance, double *values,
+                                      uint8_t *passes, uint64_t *links)
+{
+    const struct windrow_near_cursor begin = *cursor;
+    double change;
+    enum windrow_status status = windrow_kernel_relax(kernel, relaxation, cursor, first, end, values, &change);
+    uint64_t near_links = (cursor->near - begin.near) + (cursor->run_links - begin.run_links);
+    for (unsigned pass = 0; !status; pass++) {
+        if (balance)
+            balance_inside(solver, kernel, values, first, end);
+        if (pass == *passes && near_links && pass < INNER_PASSES_MOST && change > solver->own->worth * (double)near_links)
+            ++*passes;
+        if (pass == *passes)
+            break;
+        *cursor = begin;
+        status = windrow_kernel_relax(kernel, relaxation, cursor, first, end, values, &change);
+        *links += near_links;
     }
+    return status;
 }
 
 static enum windrow_status relax_block(void *context, uint64_t block, unsigned index, struct windrow_kernel *kernel, unsigned worker)
@@ -213,6 +239,7 @@ static enum windrow_status relax_block(void *context, uint64_t block, unsigned i
     if (status)
         return status;
     double *values = windrow_solver_slot_values(slot);
+    slot->inner_links = 0;
     slot->inflow[0] = slot->inflow[1] = slot->kept[0] = slot->kept[1] = 0;
     slot->own[0] = slot->own[1] = (struct windrow_own){0};
     if (balance)
@@ -234,13 +261,18 @@ static enum windrow_status relax_block(void *context, uint64_t block, unsigned i
         .jumps = solver->options.core_jump ? solver->options.core_jump + first : NULL,
         .degrees = web->degrees + first,
     };
-    if ((status = windrow_kernel_relax(kernel, &relaxation, values)))
-        return status;
-    if (!balance)
-        return WINDROW_OK;
-    uint32_t inside_first = slot->own[0].target_end, inside_end = slot->own[1].target_end ? slot->own[1].target_first : record->target_count;
-    balance_inside(solver, solver->own->first_hosts[block], kernel, values, inside_first, inside_end);
-    for (int side = 0; side < 2; side++) {
+    struct windrow_near_cursor cursor = windrow_kernel_near_begin(kernel, values);
+    uint64_t host = solver->own->first_hosts[block];
+    for (uint32_t t = 0; t < record->target_count;) {
+        uint64_t host_end = web->host_first_core(web->context, ++host) - first;
+        uint32_t end = host_end < record->target_count ? (uint32_t)host_end : record->target_count;
+        bool whole = t >= slot->own[0].target_end && (slot->own[1].target_end == 0 || end <= slot->own[1].target_first);
+        if (end > t && (status = relax_host(solver, kernel, &relaxation, &cursor, t, end, balance && whole, values,
+                                                  t == 0 ? &solver->block_passes[block] : &solver->host_passes[host - 1], &slot->inner_links)))
+            return status;
+        t = end;
+    }
+    for (int side = 0; balance && side < 2; side++) {
         add_flows(solver, kernel, values, slot->own[side].target_first, slot->own[side].target_end, &slot->inflow[side], &slot->kept[side]);
         slot->inflow[side] -= solver->options.beta * slot->own[side].sum;
     }
@@ -363,6 +395,8 @@ static enum windrow_status sweep_barrier(void *context, uint64_t first, uint64_t
     if (status)
         return status;
     windrow_solver_count_links(solver, WINDROW_BLOCK_CORE, first, end);
+    for (uint64_t block = first; block < end; block++)
+        solver->state.link_visits += solver->own->slots[block - first].inner_links;
     solver->state.next_block = end;
     /* After the last wave the sweep is finished first: there is no state between. */
     if (end == solver->options.web->block_count[WINDROW_BLOCK_CORE] || !solver->options.pause)
@@ -391,21 +425,27 @@ static double change_before(const struct windrow_solver_state *state, uint64_t s
 static void watch_guard(struct windrow_solver *solver)
 {
     struct windrow_solver_state *state = &solver->state;
-    if (state->guarded || state->change_count < 3)
+    if (state->guard == WINDROW_GUARD_NO_MIXING || state->change_count < 3)
         return;
     double now = change_before(state, 0);
     bool grows = now > change_before(state, 1) && change_before(state, 1) > change_before(state, 2);
     bool slow = state->change_count > WINDROW_SOLVER_MEMORY_SWEEPS &&
                 now > change_before(state, WINDROW_SOLVER_MEMORY_SWEEPS) * pow(solver->options.beta, WINDROW_SOLVER_MEMORY_SWEEPS);
-    if (grows || slow)
-        state->guarded = state->sweeps;
+    if (grows)
+        state->mixing = (struct windrow_mixing_state){0};
+    if (slow) {
+        state->guard++;
+        state->mixing = (struct windrow_mixing_state){0};
+        state->changes[0] = now;
+        state->change_count = 1;
+    }
 }
 
 static enum windrow_status finish_sweep(struct windrow_solver *solver)
 {
     struct windrow_solver_state *state = &solver->state;
     struct windrow_mixing_result result = {.fall = 1};
-    bool mix = !solver->options.without_mixing && !state->guarded && solver->options.method == WINDROW_METHOD_MIXED;
+    bool mix = !solver->options.without_mixing && state->guard < WINDROW_GUARD_NO_MIXING && solver->options.method == WINDROW_METHOD_MIXED;
     double floor = solver->options.core_jump ? 1 - solver->options.beta : windrow_solver_jump(solver, 0);
     solver->mixing.state = state->mixing;
     enum windrow_status status = windrow_mixing_step(&solver->mixing, solver->options.crew, solver->values, floor,
@@ -423,15 +463,6 @@ static enum windrow_status finish_sweep(struct windrow_solver *solver)
     return WINDROW_OK;
 }
 
-enum windrow_status windrow_solver_sweep(struct windrow_solver *solver)
-{
-    if (solver->options.method == WINDROW_METHOD_POWER)
-        return windrow_solver_power_sweep(solver);
-    const struct windrow_stream_job job = {.context = solver, .work = relax_block, .barrier = sweep_barrier};
-    enum windrow_status status = windrow_streamer_run(solver->own->streamer, WINDROW_BLOCK_CORE, solver->state.next_block, &job);
-    return status ? status : finish_sweep(solver);
-}
-
 /* How much the next sweep is likely to shrink the error. */
 static double next_fall(const struct windrow_solver_state *state)
 {
@@ -439,6 +470,19 @@ static double next_fall(const struct windrow_solver_state *state)
         return 1;
     double last = change_before(state, 1) > 0 ? change_before(state, 0) / change_before(state, 1) : 0;
     return fmin(1, last);
+}
+
+enum windrow_status windrow_solver_sweep(struct windrow_solver *solver)
+{
+    if (solver->options.method == WINDROW_METHOD_POWER)
+        return windrow_solver_power_sweep(solver);
+    const struct windrow_solver_state *state = &solver->state;
+    solver->own->worth = INFINITY;
+    if (!solver->options.without_inner_passes && state->sweeps >= INNER_FROM)
+        solver->own->worth = WORTH * change_before(state, 0) * next_fall(state) / (double)(solver->options.web->links[WINDROW_BLOCK_CORE] + 1);
+    const struct windrow_stream_job job = {.context = solver, .work = relax_block, .barrier = sweep_barrier};
+    enum windrow_status status = windrow_streamer_run(solver->own->streamer, WINDROW_BLOCK_CORE, solver->state.next_block, &job);
+    return status ? status : finish_sweep(solver);
 }
 
 double windrow_solver_expected_error(const struct windrow_solver *solver)

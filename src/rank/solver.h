@@ -7,9 +7,12 @@
  * before the wave, and their own updates for near sources. After a host's pages are updated, they are
  * scaled by the one factor that makes the host's own mass equation hold: what flows in = what stays + what
  * leaves (aggregation and disaggregation: Takahashi 1975; Koury, McAllister & Stewart 1984). Sweeps are
- * accelerated by Anderson mixing (mixing.h). Neither is safe alone, so there is a guard: when the change
- * grows twice in a row, or falls slower than plain power iteration would over twenty sweeps, both go off
- * for the rest of the run; plain Gauss-Seidel is a regular splitting of an M-matrix and always converges.
+ * accelerated by Anderson mixing (mixing.h). Neither is safe: on some small webs balance circles for ever.
+ * So there is a guard: when the change grows twice in a row, mixing begins anew; when twenty sweeps bring
+ * less than twenty of plain power iteration would, balance goes off for the rest of the run, and if that
+ * happens again, mixing too. Plain Gauss-Seidel is a regular splitting of an M-matrix and always converges.
+ *
+ * Where a host changes much beside the average link, its near links get more passes inside a sweep.
  *
  * The method `power` is plain power iteration over all links, the tests' witness.
  *
@@ -28,6 +31,9 @@
 
 enum { WINDROW_SOLVER_MEMORY_SWEEPS = 20 };
 
+/* What the guard has switched off. */
+enum windrow_guard { WINDROW_GUARD_OPEN, WINDROW_GUARD_NO_BALANCE, WINDROW_GUARD_NO_MIXING };
+
 struct windrow_solver_options {
     const struct windrow_web *web;
     struct windrow_crew *crew;
@@ -37,6 +43,7 @@ struct windrow_solver_options {
     const double *rim_jump;     /* NULL: uniform. Together they sum to 1 and are not negative */
     bool without_balance;       /* for measuring what each costs and brings */
     bool without_mixing;
+    bool without_inner_passes;
     struct windrow_meter *meter;  /* counts links; may be NULL */
     /* Called between two waves, when the state may be saved; anything but WINDROW_OK ends the sweep there,
      * to be gone on with by calling windrow_solver_sweep() again. May be NULL. */
@@ -57,7 +64,7 @@ struct windrow_solver_state {
     uint64_t certifications;  /* certifying passes over the core */
     uint64_t next_block;      /* of the sweep going on; 0: it has not begun */
     uint64_t link_visits;     /* all passes, certifying ones included */
-    uint64_t guarded;         /* the sweep after which the guard closed; 0: it has not */
+    uint64_t guard;           /* enum windrow_guard */
     uint64_t change_count;    /* changes known, newest last, at most the array's length */
     double changes[WINDROW_SOLVER_MEMORY_SWEEPS + 1]; /* sum of |change of y| of the last sweeps */
     double fall;              /* of the norm, as the last mixing foresaw */
@@ -76,6 +83,8 @@ struct windrow_solver {
     double *rim;                  /* y of each dangling page; filled by windrow_solver_certify() */
     double scale;                 /* sum of y; filled by windrow_solver_certify() */
     struct windrow_mixing mixing; /* with the vectors of the last change and of the columns */
+    uint8_t *host_passes;         /* passes that each host gets on top; for what a block begins with, block_passes */
+    uint8_t *block_passes;
     struct windrow_solver_private *own;
 };
 
@@ -110,7 +119,7 @@ static inline double windrow_solver_rim_score(const struct windrow_solver *solve
 }
 
 /* Vectors that a checkpoint saves, in order: pointers and their bytes. Returns how many there are. */
-enum { WINDROW_SOLVER_VECTORS_MOST = 3 + 2 * WINDROW_MIXING_COLUMNS };
+enum { WINDROW_SOLVER_VECTORS_MOST = 5 + 2 * WINDROW_MIXING_COLUMNS };
 struct windrow_solver_vector { void *data; uint64_t bytes; };
 unsigned windrow_solver_vectors(struct windrow_solver *solver, struct windrow_solver_vector vectors[WINDROW_SOLVER_VECTORS_MOST]);
 

@@ -11,6 +11,7 @@ struct windrow_solver_slot {
     struct windrow_own own[2];        /* hosts that reach out of the block */
     double inflow[2], kept[2];        /* their mass equations' two sides, over this block's targets */
     double piece_sum, piece_own;
+    uint64_t inner_links;             /* visited again by passes inside a host */
     double sum, rounding;             /* certifying: of |q|, or of y, over the block; and what of it is rounding */
 };
 
@@ -23,6 +24,7 @@ struct windrow_solver_private {
     uint64_t memory_bytes;
     unsigned workers;
     uint64_t wave_first;
+    double worth;                         /* change on a near link that makes another pass inside a host pay */
     /* Certifying: what all blocks need. */
     double jump_excess;                   /* c: q = (residual of y)/scale + c v */
     double total, total_error, rounding;  /* sums over the blocks so far, compensated */
@@ -44,7 +46,7 @@ static inline double windrow_solver_rim_jump(const struct windrow_solver *solver
 
 static inline bool windrow_solver_balances(const struct windrow_solver *solver)
 {
-    return !solver->options.without_balance && !solver->state.guarded;
+    return !solver->options.without_balance && solver->state.guard < WINDROW_GUARD_NO_BALANCE;
 }
 
 static inline enum windrow_status windrow_solver_slot_room(struct windrow_solver_slot *slot, uint32_t targets)

@@ -301,17 +301,7 @@ enum windrow_status windrow_kernel_gather(struct windrow_kernel *kernel, const d
 
 /* ---- Near sources and runs ----------------------------------------------------------------- */
 
-/* Reads near lists and runs, target by target. Their values stand in an array that begins with the value of
- * core page `origin` and has `count` entries. */
-struct near_cursor {
-    const double *values;
-    uint64_t count;
-    uint64_t near, run;           /* next of the near gaps; next of the runs' numbers */
-    uint64_t near_first, run_first;
-    bool wrong;
-};
-
-static ALWAYS_INLINE void add_near(const struct windrow_kernel *kernel, struct near_cursor *cursor, bool wide, uint64_t left,
+static ALWAYS_INLINE void add_near(const struct windrow_kernel *kernel, struct windrow_near_cursor *cursor, bool wide, uint64_t left,
                                    struct compensated *total)
 {
     uint64_t ids[WINDROW_CHUNK_LINKS], id = 0;
@@ -335,7 +325,7 @@ static ALWAYS_INLINE void add_near(const struct windrow_kernel *kernel, struct n
     }
 }
 
-static ALWAYS_INLINE void add_runs(const struct windrow_kernel *kernel, struct near_cursor *cursor, bool wide, uint64_t left,
+static ALWAYS_INLINE void add_runs(const struct windrow_kernel *kernel, struct windrow_near_cursor *cursor, bool wide, uint64_t left,
                                    struct compensated *total)
 {
     uint64_t end = 0;
@@ -352,12 +342,13 @@ static ALWAYS_INLINE void add_runs(const struct windrow_kernel *kernel, struct n
         end = start + length;
         for (uint64_t at = start; at < end; at += WINDROW_CHUNK_LINKS)
             compensated_add(total, chunk_sum_run(cursor->values + at, end - at < WINDROW_CHUNK_LINKS ? end - at : WINDROW_CHUNK_LINKS));
+        cursor->run_links += length;
         cursor->run += 2;
     }
 }
 
 /* The sum over target t's near sources and runs, added to its far sum. */
-static ALWAYS_INLINE double next_sum(const struct windrow_kernel *kernel, struct near_cursor *cursor, bool wide, uint32_t t)
+static ALWAYS_INLINE double next_sum(const struct windrow_kernel *kernel, struct windrow_near_cursor *cursor, bool wide, uint32_t t)
 {
     struct compensated total = {.sum = kernel->far[t]};
     uint64_t near = kernel->near_counts.count ? number_at(&kernel->near_counts, t, wide) : 0;
@@ -369,36 +360,45 @@ static ALWAYS_INLINE double next_sum(const struct windrow_kernel *kernel, struct
     return total.sum + total.error;
 }
 
-static struct near_cursor near_cursor_begin(const struct windrow_kernel *kernel, const double *values, uint64_t origin, uint64_t count)
+static struct windrow_near_cursor cursor_at(const struct windrow_kernel *kernel, const double *values, uint64_t origin, uint64_t count)
 {
-    return (struct near_cursor){.values = values, .count = count,
-                                .near_first = kernel->block.near_base - origin, .run_first = kernel->block.run_base - origin};
+    return (struct windrow_near_cursor){.values = values, .count = count,
+                                        .near_first = kernel->block.near_base - origin, .run_first = kernel->block.run_base - origin};
 }
 
-static ALWAYS_INLINE bool relax(struct windrow_kernel *kernel, const struct windrow_relaxation *relaxation, bool wide, double *values)
+struct windrow_near_cursor windrow_kernel_near_begin(const struct windrow_kernel *kernel, const double *values)
 {
-    uint32_t targets = kernel->block.target_count;
-    struct near_cursor cursor = near_cursor_begin(kernel, values, kernel->block.first_target, targets);
-    double beta = relaxation->beta;
-    for (uint32_t t = 0; t < targets; t++) {
-        double sum = next_sum(kernel, &cursor, wide, t);
-        if (cursor.wrong)
+    return cursor_at(kernel, values, kernel->block.first_target, kernel->block.target_count);
+}
+
+static ALWAYS_INLINE bool relax(struct windrow_kernel *kernel, const struct windrow_relaxation *relaxation, bool wide,
+                                struct windrow_near_cursor *cursor, uint32_t first, uint32_t end, double *values, double *change)
+{
+    double beta = relaxation->beta, total = 0;
+    for (uint32_t t = first; t < end; t++) {
+        double sum = next_sum(kernel, cursor, wide, t);
+        if (cursor->wrong)
             return false;
         double jump = relaxation->jumps ? (1 - beta) * relaxation->jumps[t] : relaxation->jump;
-        values[t] = (jump + beta * sum) / relaxation->degrees[t];
+        double score = jump + beta * sum, degree = relaxation->degrees[t];
+        total += fabs(score - values[t] * degree);
+        values[t] = score / degree;
     }
+    *change = total;
     return true;
 }
 
-enum windrow_status windrow_kernel_relax(struct windrow_kernel *kernel, const struct windrow_relaxation *relaxation, double *values)
+enum windrow_status windrow_kernel_relax(struct windrow_kernel *kernel, const struct windrow_relaxation *relaxation,
+                                         struct windrow_near_cursor *cursor, uint32_t first, uint32_t end, double *values, double *change)
 {
-    bool fine = is_wide(kernel) ? relax(kernel, relaxation, true, values) : relax(kernel, relaxation, false, values);
+    bool fine = is_wide(kernel) ? relax(kernel, relaxation, true, cursor, first, end, values, change)
+                                : relax(kernel, relaxation, false, cursor, first, end, values, change);
     return fine ? WINDROW_OK : damaged(kernel, "a near source lies outside");
 }
 
 static ALWAYS_INLINE bool sums_of(struct windrow_kernel *kernel, const double *values, uint64_t core_pages, bool wide, double *sums)
 {
-    struct near_cursor cursor = near_cursor_begin(kernel, values, 0, core_pages);
+    struct windrow_near_cursor cursor = cursor_at(kernel, values, 0, core_pages);
     for (uint32_t t = 0; t < kernel->block.target_count; t++) {
         sums[t] = next_sum(kernel, &cursor, wide, t);
         if (cursor.wrong)

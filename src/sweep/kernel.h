@@ -62,9 +62,25 @@ struct windrow_relaxation {
     const uint32_t *degrees;
 };
 
-/* Gauss-Seidel over the block's targets in order: near sources and runs read `values` (by target, at first
- * those from before the wave), which each update changes at once. For core blocks that are no pieces. */
-enum windrow_status windrow_kernel_relax(struct windrow_kernel *kernel, const struct windrow_relaxation *relaxation, double *values);
+/* Where the reading of near lists and runs stands: a target's lists can be found only after those before it.
+ * A copy lets some targets be updated again. */
+struct windrow_near_cursor {
+    const double *values;         /* begin with the value of core page `origin` */
+    uint64_t count;               /* of values */
+    uint64_t near, run;           /* next of the near gaps; next of the runs' numbers */
+    uint64_t near_first, run_first;
+    uint64_t run_links;           /* links in the runs so far */
+    bool wrong;
+};
+
+/* At the block's first target; `values` has one entry for each target. */
+struct windrow_near_cursor windrow_kernel_near_begin(const struct windrow_kernel *kernel, const double *values);
+
+/* Gauss-Seidel over the targets from `first` to before `end`, where the cursor stands: near sources and runs
+ * read `values` (by target, at first those from before the wave), which each update changes at once. For
+ * core blocks that are no pieces. `change` is set to the sum of |change| x degree. */
+enum windrow_status windrow_kernel_relax(struct windrow_kernel *kernel, const struct windrow_relaxation *relaxation,
+                                         struct windrow_near_cursor *cursor, uint32_t first, uint32_t end, double *values, double *change);
 
 /* All sources of each target summed, from values that stay: `sums` has one entry a target. */
 enum windrow_status windrow_kernel_sums(struct windrow_kernel *kernel, const double *values, uint64_t core_pages, double *sums);
