@@ -33,7 +33,7 @@ $(BUILD)/%.o: %.c
 	@mkdir -p $(@D)
 	@echo '  $@' && $(CC) $(ALL_CFLAGS) -c -o $@ $<
 
-$(BUILD)/tests/%_unit: $(BUILD)/tests/%_unit.o $(BUILD)/libwindrow.a
+$(BUILD)/tests/%_unit: $(BUILD)/tests/%_unit.o $(BUILD)/tests/libcommon.a $(BUILD)/libwindrow.a
 	@echo '  $@' && $(CC) $(ALL_CFLAGS) -o $@ $^ -lcmocka $(LIBRARIES)
 
 include tests/tests.mk

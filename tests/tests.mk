@@ -6,21 +6,20 @@ RUN_SOURCES = $(wildcard tests/*/*_run.c)
 RUNS = $(RUN_SOURCES:%.c=$(BUILD)/%)
 HYPERLINKS = $(BUILD)/tests/outside/hyperlinks
 
-# Units that use a helper name it here; the Makefile's rule links it.
-$(BUILD)/tests/common/oracle_unit: $(COMMON_OBJECTS)
-$(BUILD)/tests/outside/reference_unit: $(BUILD)/tests/outside/reference.o $(BUILD)/tests/common/memory.o
+# The helpers as an archive: a test takes what it uses.
+$(BUILD)/tests/libcommon.a: $(COMMON_OBJECTS)
+	@echo '  $@' && rm -f $@ && $(AR) rcs $@ $^
 
-# A unit of the solver may ask the judge.
-$(patsubst %.c,$(BUILD)/%,$(wildcard tests/rank/*_unit.c)): $(COMMON_OBJECTS)
+$(BUILD)/tests/outside/reference_unit: $(BUILD)/tests/outside/reference.o
 
-$(BUILD)/tests/program/%_run: $(BUILD)/tests/program/%_run.o $(COMMON_OBJECTS)
-	$(CC) $(ALL_CFLAGS) -o $@ $^ -lcmocka $(LIBRARIES)
+$(BUILD)/tests/program/%_run: $(BUILD)/tests/program/%_run.o $(BUILD)/tests/libcommon.a
+	@echo '  $@' && $(CC) $(ALL_CFLAGS) -o $@ $^ -lcmocka $(LIBRARIES)
 
-$(BUILD)/tests/outside/%_run: $(BUILD)/tests/outside/%_run.o $(OUTSIDE_OBJECTS) $(COMMON_OBJECTS)
-	$(CC) $(ALL_CFLAGS) -o $@ $^ -lcmocka $(shell pkg-config --libs igraph) $(LIBRARIES)
+$(BUILD)/tests/outside/%_run: $(BUILD)/tests/outside/%_run.o $(OUTSIDE_OBJECTS) $(BUILD)/tests/libcommon.a
+	@echo '  $@' && $(CC) $(ALL_CFLAGS) -o $@ $^ -lcmocka $(shell pkg-config --libs igraph) $(LIBRARIES)
 
-$(HYPERLINKS): $(HYPERLINKS).o $(BUILD)/tests/outside/reference.o $(BUILD)/tests/common/memory.o
-	$(CC) $(ALL_CFLAGS) -o $@ $^ $(shell pkg-config --libs gumbo)
+$(HYPERLINKS): $(HYPERLINKS).o $(BUILD)/tests/outside/reference.o $(BUILD)/tests/libcommon.a
+	@echo '  $@' && $(CC) $(ALL_CFLAGS) -o $@ $^ $(shell pkg-config --libs gumbo)
 
 # Everything that scripts/check runs.
 runs: $(BUILD)/windrow $(BUILD)/crawlgen $(RUNS) $(HYPERLINKS)
