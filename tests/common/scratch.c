@@ -186,7 +186,7 @@ static char *content_of(const char *store, const char *path, size_t *byte_count)
     const char *name = strrchr(path, '/');
     if (strcmp(name != NULL ? name + 1 : path, "data.mdb") == 0) {
         *strrchr(full, '/') = '\0';
-        struct outcome outcome = RUN("mdb_dump", "-a", full);
+        struct outcome outcome = RUN("mdb_dump", full);
         outcome_expect(&outcome, 0);
         bytes = outcome.out;
         *byte_count = outcome.out_bytes;
