@@ -215,7 +215,7 @@ static enum windrow_status relax_host(const struct windrow_solver *solver, struc
     for (unsigned pass = 0; !status; pass++) {
         if (balance)
             balance_inside(solver, kernel, values, first, end);
-        if (pass == *passes && near_links && pass < INNER_PASSES_MOST && change > solver->own->worth * (double)near_links)
+        if (pass == *passes && near_links && near_links <= solver->own->inner_links_most && pass < INNER_PASSES_MOST && change > solver->own->worth * (double)near_links)
             ++*passes;
         if (pass == *passes)
             break;
@@ -478,6 +478,7 @@ enum windrow_status windrow_solver_sweep(struct windrow_solver *solver)
         return windrow_solver_power_sweep(solver);
     const struct windrow_solver_state *state = &solver->state;
     solver->own->worth = INFINITY;
+    solver->own->inner_links_most = solver->options.web->links[WINDROW_BLOCK_CORE] / 16;
     if (!solver->options.without_inner_passes && state->sweeps >= INNER_FROM)
         solver->own->worth = WORTH * change_before(state, 0) * next_fall(state) / (double)(solver->options.web->links[WINDROW_BLOCK_CORE] + 1);
     const struct windrow_stream_job job = {.context = solver, .work = relax_block, .barrier = sweep_barrier};
