@@ -6,7 +6,8 @@ enum { LABEL_SEPARATOR = 0x01, HTTP = 0x01, HTTP_WITH_PORT = 0x02, HTTPS = 0x03,
 
 int windrow_key_compare(const char *a, size_t a_bytes, const char *b, size_t b_bytes)
 {
-    int order = memcmp(a, b, a_bytes < b_bytes ? a_bytes : b_bytes);
+    size_t both = a_bytes < b_bytes ? a_bytes : b_bytes;
+    int order = both ? memcmp(a, b, both) : 0; /* an empty key may have no address */
     return order != 0 ? order : (a_bytes > b_bytes) - (a_bytes < b_bytes);
 }
 
