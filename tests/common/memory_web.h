@@ -1,9 +1,9 @@
 /* memory_web: a test's web as sweeps see one, without a store: blocks as small as a test likes, so that
  * waves, pieces of lists and hosts across blocks come up in webs of a few pages. */
-#ifndef TESTS_SWEEP_MEMORY_WEB_H
-#define TESTS_SWEEP_MEMORY_WEB_H
+#ifndef TESTS_COMMON_MEMORY_WEB_H
+#define TESTS_COMMON_MEMORY_WEB_H
 
-#include "../common/graph.h"
+#include "graph.h"
 #include "sweep/web.h"
 
 struct memory_web {

@@ -3,7 +3,7 @@
 #include <stdlib.h>
 #include <string.h>
 
-#include "../common/memory.h"
+#include "memory.h"
 
 static uint64_t host_first_core(const void *context, uint64_t host)
 {
