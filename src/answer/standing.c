@@ -47,8 +47,6 @@ static void read_facts(const struct windrow_store *store, struct windrow_standin
     standing->hosts = facts->hosts;
     standing->core_pages = facts->core_pages;
     standing->core_links = facts->core_links;
-    for (int i = 0; i < WINDROW_DROP_COUNT; i++)
-        standing->dropped[i] = facts->dropped[i];
     standing->link_bits = link_bits(store);
 }
 
@@ -85,6 +83,8 @@ enum windrow_status windrow_standing_read(const char *path, const char *run_name
     if (!windrow_job_status(path, &job)) { /* a store can be whole without the ledger of the job that made it */
         standing->elapsed_seconds = job.elapsed_seconds;
         standing->peak_memory_bytes = job.peak_memory_bytes;
+        for (int i = 0; i < WINDROW_DROP_COUNT; i++)
+            standing->dropped[i] = job.dropped[i];
     }
     status = windrow_run_open(store, run_name, &run);
     if (!status)

@@ -54,6 +54,7 @@ struct job {
     uint64_t *segment_cores;
     struct windrow_table_totals totals;
     const struct windrow_linkmerge *merge;
+    uint64_t duplicates;                 /* links found in more than one batch */
     uint64_t memory_bytes;               /* for data */
 };
 
@@ -345,6 +346,7 @@ static enum windrow_status add_segments(struct job *job, struct windrow_manifest
 {
     enum windrow_status status = WINDROW_OK;
     struct windrow_buffer records = {0};
+    uint64_t duplicates = 0;
     for (uint64_t segment = 0; !status && segment < job->segment_count; segment++) {
         struct windrow_linkmerge_head head;
         uint64_t bytes, checksum;
@@ -365,8 +367,9 @@ static enum windrow_status add_segments(struct job *job, struct windrow_manifest
         }
         manifest->facts.links += head.links;
         manifest->facts.core_links += head.core_links;
-        manifest->facts.dropped[WINDROW_DROP_DUPLICATE] += head.duplicates;
+        duplicates += head.duplicates;
     }
+    job->duplicates = duplicates;
     windrow_buffer_free(&records);
     return status;
 }
@@ -436,7 +439,6 @@ static enum windrow_status describe(struct job *job, struct windrow_manifest *ma
     *manifest = (struct windrow_manifest){.facts = {.pages = job->totals.pages, .core_pages = job->totals.core_pages,
                                                     .crawled_pages = job->totals.crawled_pages, .hosts = job->totals.hosts,
                                                     .dangling_pages = job->totals.pages - job->totals.core_pages, .key_bytes = job->totals.key_bytes}};
-    memcpy(manifest->facts.dropped, job->reading.dropped, sizeof manifest->facts.dropped);
     enum windrow_status status = WINDROW_OK;
     for (size_t flat = 0; !status && flat < (with_aliases ? 10u : 7u); flat++)
         status = add_flat_file(job, manifest, flats[flat]);
@@ -587,7 +589,8 @@ static enum windrow_status work(struct job *job)
         status = finish(job);
     if (status)
         return status;
-    return windrow_job_note(job->ledger, windrow_seconds() - began);
+    job->reading.dropped[WINDROW_DROP_DUPLICATE] += job->duplicates;
+    return windrow_job_note(job->ledger, windrow_seconds() - began, job->reading.dropped);
 }
 
 static enum windrow_status check_options(const struct windrow_shard_options *options)

@@ -1,15 +1,18 @@
 #include "shard/job.h"
 
 #include <stdlib.h>
+#include <string.h>
 
 struct outcome {
     double elapsed_seconds;
     uint64_t peak_memory_bytes;
+    uint64_t dropped[WINDROW_DROP_COUNT];
 };
 
-enum windrow_status windrow_job_note(struct windrow_ledger *ledger, double elapsed_seconds)
+enum windrow_status windrow_job_note(struct windrow_ledger *ledger, double elapsed_seconds, const uint64_t *dropped)
 {
-    struct outcome outcome = {elapsed_seconds, windrow_memory_peak_bytes()};
+    struct outcome outcome = {.elapsed_seconds = elapsed_seconds, .peak_memory_bytes = windrow_memory_peak_bytes()};
+    memcpy(outcome.dropped, dropped, sizeof outcome.dropped);
     struct windrow_ledger_record record = {"finished", &outcome, sizeof outcome};
     return windrow_ledger_commit(ledger, &record, 1);
 }
@@ -58,6 +61,7 @@ enum windrow_status windrow_job_status(const char *store, struct windrow_job_sta
         out->stage = WINDROW_JOB_FINISHED;
         out->elapsed_seconds = outcome.elapsed_seconds;
         out->peak_memory_bytes = outcome.peak_memory_bytes;
+        memcpy(out->dropped, outcome.dropped, sizeof out->dropped);
     } else if (status == WINDROW_NO) {
         status = WINDROW_OK;
     }

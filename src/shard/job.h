@@ -14,6 +14,7 @@ struct windrow_job_status {
     bool running;                          /* some process works on it now */
     struct windrow_reading_state reading;
     uint64_t done_tasks;                   /* of the stage; 0 while reading */
+    uint64_t dropped[WINDROW_DROP_COUNT];  /* of the finished job: the links of its dumps that were left out, by reason */
     double elapsed_seconds;                /* of the finished job, its last process alone */
     uint64_t peak_memory_bytes;            /* likewise */
 };
@@ -21,8 +22,9 @@ struct windrow_job_status {
 /* WINDROW_NO: nothing was ever sharded into `store`. */
 enum windrow_status windrow_job_status(const char *store, struct windrow_job_status *status);
 
-/* For the job itself: notes that it is through, and what it took; and whether that is so. */
-enum windrow_status windrow_job_note(struct windrow_ledger *ledger, double elapsed_seconds);
+/* For the job itself: notes that it is through, what it took and what it dropped (WINDROW_DROP_COUNT counts); and whether
+ * that is so. */
+enum windrow_status windrow_job_note(struct windrow_ledger *ledger, double elapsed_seconds, const uint64_t *dropped);
 enum windrow_status windrow_job_finished(struct windrow_ledger *ledger, bool *finished);
 
 #endif

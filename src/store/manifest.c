@@ -93,11 +93,9 @@ static size_t facts_numbers(struct windrow_store_facts *facts, uint64_t **number
     numbers[count++] = &facts->core_links;
     numbers[count++] = &facts->hosts;
     numbers[count++] = &facts->key_bytes;
-    for (int drop = 0; drop < WINDROW_DROP_COUNT; drop++)
-        numbers[count++] = &facts->dropped[drop];
     return count;
 }
-#define FACTS_NUMBERS (8 + WINDROW_DROP_COUNT)
+#define FACTS_NUMBERS 8
 
 #define RECORD_BYTES 56
 static void record_put(uint8_t *out, const struct windrow_block_record *record)

@@ -23,7 +23,6 @@ struct windrow_store_facts {
     uint64_t links;
     uint64_t core_links;      /* from core page to core page */
     uint64_t hosts;
-    uint64_t dropped[WINDROW_DROP_COUNT];
     uint64_t key_bytes;       /* of all page keys; a URL is some 6 bytes longer */
     uint64_t fingerprint;     /* of everything in the store: equal stores have equal ones */
 };
