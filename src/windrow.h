@@ -102,6 +102,78 @@ void windrow_shard_defaults(struct windrow_shard_options *options);
  * fields is too high), WINDROW_RESOURCE, WINDROW_DAMAGED, WINDROW_STOPPED. */
 enum windrow_status windrow_shard(const struct windrow_shard_options *options, bool *already_done);
 
+/* ---- URLs that may be one page --------------------------------------------------------------- */
+
+/* Pages whose URL differs from another page's only by scheme, by a leading "www.", or by a slash at the end of
+ * the path. Each counts once, for how it differs from the one of its group that would stand for all. */
+struct windrow_variant_counts {
+    uint64_t pages;       /* the sum of the following */
+    uint64_t by_scheme;
+    uint64_t by_www;
+    uint64_t by_slash;
+    uint64_t by_several;  /* of these at once */
+};
+
+/* Looks for such pages in a finished store, and writes lines FROM TAB TO, in host order of FROM, which may be
+ * looked through and given to --aliases. TO is the URL with https, without "www.", with the slash, in this
+ * order of importance. `out_path`: a file to replace, NULL: only count. `watch` may be NULL. Errors:
+ * WINDROW_USAGE (no store), WINDROW_NO (not finished yet), WINDROW_DAMAGED,
+ * WINDROW_RESOURCE, WINDROW_STOPPED. */
+enum windrow_status windrow_suggest_aliases(const char *store, uint64_t memory_bytes, const char *out_path,
+                                            struct windrow_variant_counts *counts, const struct windrow_watch *watch);
+
+/* ---- Planning ------------------------------------------------------------------------------ */
+
+/* A figure and the range it is thought to lie in. */
+struct windrow_interval {
+    double low, point, high;
+};
+
+struct windrow_plan_options {
+    const char *const *dumps;    /* as for sharding; standard input only with `full` */
+    size_t dump_count;
+    enum windrow_shape shape;
+    uint64_t memory_bytes;       /* of the job that is planned; planning itself takes at most half of it */
+    unsigned threads;
+    const char *temporary;       /* directory for the sample and its store; NULL: $TMPDIR or /tmp */
+    uint64_t sample_bytes;       /* of decompressed dump; most that is read without `full`, and that is sharded for trial */
+    bool full;                   /* read everything */
+    bool keep_nofollow;
+    struct windrow_watch watch;
+};
+
+/* Where a plan's counts come from, from the surest to the least sure. */
+enum windrow_plan_basis { WINDROW_PLAN_WHOLE,  /* everything was read */
+                          WINDROW_PLAN_PLACES, /* places spread evenly over all dumps */
+                          WINDROW_PLAN_PREFIX  /* the beginnings of compressed dumps */ };
+
+struct windrow_plan {
+    enum windrow_plan_basis basis;
+    double share;                         /* of the dumps that was read, 0 to 1 */
+    struct windrow_interval lines, fields; /* URL fields */
+    struct windrow_interval pages, crawled_pages, core_pages, hosts, links, core_links;
+    struct windrow_interval dangling_share, frontier_share; /* of pages: without a kept out-link; never fetched */
+    struct windrow_interval variants;     /* pages that differ from another only by scheme, www or slash */
+    struct windrow_variant_counts variant_kinds; /* the points of its parts */
+    struct windrow_interval link_bits;    /* bytes of blocks × 8 / links */
+    struct windrow_interval store_bytes;
+    struct windrow_interval scratch_bytes; /* the most that scratch files take at a time */
+    struct windrow_interval disk_bytes;    /* scratch and store together at the worst moment of sharding */
+    struct windrow_interval run_bytes;     /* what a run leaves beside the store */
+    struct windrow_interval vector_bytes;  /* memory of the vectors while ranking */
+    bool vectors_fit;                      /* all of them in memory_bytes, at the high end */
+    uint64_t tiles;                        /* stripes that the vectors would be cut into at the high end: 1 when they fit */
+    struct windrow_interval shard_seconds, sweep_seconds, rank_seconds; /* ranking to error_l1 1e-9 */
+};
+
+void windrow_plan_defaults(struct windrow_plan_options *options);
+
+/* Tells what a job on these dumps will take. Reads a sample of them, or everything with `full`, and shards
+ * the sample for trial, since what a link and a page take on disk, and the speed, are this crawl's and this machine's
+ * own. Errors: WINDROW_USAGE (standard input or a pipe without `full`, dumps of ids), WINDROW_INPUT,
+ * WINDROW_RESOURCE, WINDROW_STOPPED. */
+enum windrow_status windrow_plan(const struct windrow_plan_options *options, struct windrow_plan *plan);
+
 /* ---- Ranking ------------------------------------------------------------------------------- */
 
 enum windrow_method { WINDROW_METHOD_MIXED, /* Gauss-Seidel, host balance, Anderson mixing */

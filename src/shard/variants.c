@@ -1,0 +1,294 @@
+#include "shard/variants.h"
+
+#include "shard/sorter.h"
+#include "store/layout.h"
+
+#include <errno.h>
+#include <stdio.h>
+#include <stdlib.h>
+#include <string.h>
+#include <unistd.h>
+#include <xxhash.h>
+
+enum { HTTP = 0x01, HTTPS = 0x03 };
+
+size_t windrow_variants_shared(const uint8_t *key, size_t key_bytes, uint8_t *out, unsigned *features)
+{
+    static const char www[] = {0x01, 'w', 'w', 'w'}; /* the last label of a host in a key is its first one */
+    size_t host_bytes = windrow_key_host_bytes((const char *)key, key_bytes), kept = host_bytes;
+    *features = WINDROW_VARIANT_BARE;
+    if (host_bytes > sizeof www && memcmp(key + host_bytes - sizeof www, www, sizeof www) == 0) {
+        kept -= sizeof www;
+        *features = 0;
+    }
+    uint8_t *end = mempcpy(out, key, kept);
+    if (key_bytes - host_bytes < 2)
+        return (size_t)((uint8_t *)mempcpy(end, key + host_bytes, key_bytes - host_bytes) - out);
+    uint8_t scheme = key[host_bytes + 1];
+    if (scheme == HTTPS)
+        *features |= WINDROW_VARIANT_HTTPS;
+    *end++ = 0;
+    *end++ = scheme == HTTPS ? HTTP : scheme;
+    const uint8_t *path = key + host_bytes + 2, *key_end = key + key_bytes;
+    size_t port_bytes = scheme != HTTP && scheme != HTTPS && key_end - path >= 2 ? 2 : 0;
+    end = mempcpy(end, path, port_bytes);
+    path += port_bytes;
+    const uint8_t *query = memchr(path, '?', (size_t)(key_end - path)), *path_end = query ? query : key_end;
+    size_t path_bytes = (size_t)(path_end - path);
+    if (path_bytes > 1 && path[path_bytes - 1] == '/') {
+        path_bytes--;
+        *features |= WINDROW_VARIANT_SLASH;
+    }
+    end = mempcpy(end, path, path_bytes);
+    end = mempcpy(end, path_end, (size_t)(key_end - path_end));
+    return (size_t)(end - out);
+}
+
+void windrow_variants_count(struct windrow_variant_counts *counts, unsigned from_features, unsigned to_features)
+{
+    counts->pages++;
+    switch (from_features ^ to_features) {
+    case WINDROW_VARIANT_HTTPS: counts->by_scheme++; break;
+    case WINDROW_VARIANT_BARE: counts->by_www++; break;
+    case WINDROW_VARIANT_SLASH: counts->by_slash++; break;
+    default: counts->by_several++; break;
+    }
+}
+
+struct finder {
+    const struct windrow_store *store;
+    const char *scratch;
+    uint64_t memory_bytes;
+    struct windrow_variant_counts *counts;
+    struct windrow_meter *meter;
+    struct windrow_page_reader *reader;
+    struct windrow_sorter *by_hash, *by_page, *by_shared, *by_from;
+    struct windrow_buffer shared, value; /* of the record under way */
+};
+
+static enum windrow_status check_stop(const struct finder *finder)
+{
+    if (finder->meter && windrow_meter_stopping(finder->meter))
+        return windrow_fail(WINDROW_STOPPED, "stopped while looking for variants of URLs; run the same command again");
+    return WINDROW_OK;
+}
+
+/* Numbers sort as their bytes do with the most significant one first. */
+static void put_number(uint8_t *out, uint64_t number)
+{
+    for (int byte = 7; byte >= 0; byte--, number >>= 8)
+        out[byte] = (uint8_t)number;
+}
+
+static uint64_t number_at(const uint8_t *in)
+{
+    uint64_t number = 0;
+    for (int byte = 0; byte < 8; byte++)
+        number = number << 8 | in[byte];
+    return number;
+}
+
+/* What the page's variants share goes into finder->shared. */
+static enum windrow_status read_shared(struct finder *finder, uint64_t page, const uint8_t **key, size_t *key_bytes, unsigned *features)
+{
+    enum windrow_status status = windrow_page_reader_key(finder->reader, page, key, key_bytes);
+    finder->shared.bytes = 0;
+    if (!status)
+        status = windrow_buffer_reserve(&finder->shared, *key_bytes + 1);
+    if (!status)
+        finder->shared.bytes = windrow_variants_shared(*key, *key_bytes, finder->shared.data, features);
+    return status;
+}
+
+/* All pages -> by_hash: (hash, page). */
+static enum windrow_status hash_pages(struct finder *finder)
+{
+    uint64_t pages = windrow_store_facts(finder->store)->pages;
+    enum windrow_status status = windrow_sorter_create(finder->scratch, "variants-hash", finder->memory_bytes, &finder->by_hash);
+    for (uint64_t page = 0; !status && page < pages; page++) {
+        const uint8_t *key;
+        size_t key_bytes;
+        unsigned features;
+        uint8_t numbers[16];
+        if ((status = read_shared(finder, page, &key, &key_bytes, &features)))
+            break;
+        put_number(numbers, XXH3_64bits(finder->shared.data, finder->shared.bytes));
+        put_number(numbers + 8, page);
+        /* The page is part of the key: what is equal in both cannot be. */
+        status = windrow_sorter_put(finder->by_hash, &(struct windrow_record){numbers, sizeof numbers, NULL, 0});
+        if (finder->meter && (page + 1) % 4096 == 0)
+            windrow_meter_add(finder->meter, 4096);
+        if (!status && page % 65536 == 0)
+            status = check_stop(finder);
+    }
+    return status;
+}
+
+/* by_hash -> by_page: pages whose hash is met at least twice. */
+static enum windrow_status choose_pages(struct finder *finder)
+{
+    enum windrow_status status = windrow_sorter_create(finder->scratch, "variants-page", finder->memory_bytes / 2, &finder->by_page);
+    uint8_t before[16];
+    bool any = false, taken = false;
+    while (!status) {
+        struct windrow_record record;
+        bool ended;
+        if ((status = windrow_sorter_next(finder->by_hash, &record, &ended)) || ended)
+            break;
+        bool same = any && memcmp(before, record.key, 8) == 0;
+        if (same && !taken)
+            status = windrow_sorter_put(finder->by_page, &(struct windrow_record){before + 8, 8, NULL, 0});
+        if (same && !status)
+            status = windrow_sorter_put(finder->by_page, &(struct windrow_record){record.key + 8, 8, NULL, 0});
+        taken = same;
+        any = true;
+        memcpy(before, record.key, sizeof before);
+    }
+    windrow_sorter_destroy(finder->by_hash);
+    finder->by_hash = NULL;
+    return status;
+}
+
+/* by_page -> by_shared: (shared text, features and key). */
+static enum windrow_status read_chosen(struct finder *finder)
+{
+    enum windrow_status status = windrow_sorter_create(finder->scratch, "variants-shared", finder->memory_bytes / 2, &finder->by_shared);
+    for (uint64_t count = 0; !status; count++) {
+        struct windrow_record record;
+        bool ended;
+        const uint8_t *key;
+        size_t key_bytes;
+        unsigned features;
+        if ((status = windrow_sorter_next(finder->by_page, &record, &ended)) || ended)
+            break;
+        if ((status = read_shared(finder, number_at(record.key), &key, &key_bytes, &features)))
+            break;
+        /* Best TO first: values are ordered bytewise. */
+        uint8_t order = (uint8_t)(7 - features);
+        finder->value.bytes = 0;
+        if ((status = windrow_buffer_append(&finder->value, &order, 1)) || (status = windrow_buffer_append(&finder->value, key, key_bytes)))
+            break;
+        status = windrow_sorter_put(finder->by_shared, &(struct windrow_record){finder->shared.data, finder->shared.bytes, finder->value.data,
+                                                                                finder->value.bytes});
+        if (!status && count % 65536 == 0)
+            status = check_stop(finder);
+    }
+    windrow_sorter_destroy(finder->by_page);
+    finder->by_page = NULL;
+    return status;
+}
+
+/* by_shared -> counts and, when lines are wanted, by_from: (FROM's key, TO's key). */
+static enum windrow_status pair_pages(struct finder *finder, bool lines)
+{
+    enum windrow_status status = WINDROW_OK;
+    if (lines)
+        status = windrow_sorter_create(finder->scratch, "variants-from", finder->memory_bytes / 2, &finder->by_from);
+    finder->shared.bytes = finder->value.bytes = 0; /* of the group's first record, its TO */
+    bool any = false;
+    while (!status) {
+        struct windrow_record record;
+        bool ended;
+        if ((status = windrow_sorter_next(finder->by_shared, &record, &ended)) || ended)
+            break;
+        if (any && record.key_bytes == finder->shared.bytes && memcmp(record.key, finder->shared.data, record.key_bytes) == 0) {
+            windrow_variants_count(finder->counts, 7u - record.value[0], 7u - finder->value.data[0]);
+            if (lines)
+                status = windrow_sorter_put(finder->by_from, &(struct windrow_record){record.value + 1, record.value_bytes - 1, finder->value.data + 1,
+                                                                                      finder->value.bytes - 1});
+            continue;
+        }
+        any = true;
+        finder->shared.bytes = finder->value.bytes = 0;
+        status = windrow_buffer_append(&finder->shared, record.key, record.key_bytes);
+        if (!status)
+            status = windrow_buffer_append(&finder->value, record.value, record.value_bytes);
+    }
+    windrow_sorter_destroy(finder->by_shared);
+    finder->by_shared = NULL;
+    return status;
+}
+
+static enum windrow_status append_url(struct windrow_writer *out, const uint8_t *key, size_t key_bytes, char *url, char end)
+{
+    size_t url_bytes = windrow_key_url((const char *)key, key_bytes, url, WINDROW_URL_BYTES_MAX);
+    if (!url_bytes)
+        return windrow_fail(WINDROW_DAMAGED, "a page key is not well formed");
+    url[url_bytes] = end;
+    return windrow_writer_append(out, url, url_bytes + 1);
+}
+
+/* Written aside and renamed: a half-written list of candidates is worse than none. */
+static enum windrow_status write_lines(struct finder *finder, const char *out_path)
+{
+    struct windrow_writer out = {.descriptor = -1};
+    char *aside = NULL, *url = malloc(WINDROW_URL_BYTES_MAX + 1);
+    if (asprintf(&aside, "%s.new", out_path) < 0)
+        aside = NULL;
+    enum windrow_status status = aside && url ? windrow_writer_open(&out, aside, false) : windrow_fail(WINDROW_RESOURCE, "out of memory for a path");
+    while (!status) {
+        struct windrow_record record;
+        bool ended;
+        if ((status = windrow_sorter_next(finder->by_from, &record, &ended)) || ended)
+            break;
+        status = append_url(&out, record.key, record.key_bytes, url, '\t');
+        if (!status)
+            status = append_url(&out, record.value, record.value_bytes, url, '\n');
+    }
+    if (!status)
+        status = windrow_writer_finish(&out, NULL);
+    windrow_writer_abandon(&out);
+    if (!status && windrow_files.rename(aside, out_path))
+        status = windrow_fail_system(WINDROW_RESOURCE, errno, "cannot rename %s to %s", aside, out_path);
+    if (status && aside)
+        windrow_files.unlink(aside);
+    free(aside);
+    free(url);
+    return status;
+}
+
+enum windrow_status windrow_variants_find(const struct windrow_store *store, const char *scratch, uint64_t memory_bytes, const char *out_path,
+                                          struct windrow_variant_counts *counts, struct windrow_meter *meter)
+{
+    *counts = (struct windrow_variant_counts){0};
+    struct finder finder = {.store = store, .scratch = scratch, .memory_bytes = memory_bytes, .counts = counts, .meter = meter};
+    enum windrow_status status = windrow_page_reader_create(store, &finder.reader);
+    if (status || (status = hash_pages(&finder)) || (status = choose_pages(&finder)) || (status = read_chosen(&finder)) ||
+        (status = pair_pages(&finder, out_path != NULL)))
+        goto out;
+    if (out_path)
+        status = write_lines(&finder, out_path);
+out:
+    windrow_sorter_destroy(finder.by_hash);
+    windrow_sorter_destroy(finder.by_page);
+    windrow_sorter_destroy(finder.by_shared);
+    windrow_sorter_destroy(finder.by_from);
+    windrow_page_reader_destroy(finder.reader);
+    windrow_buffer_free(&finder.shared);
+    windrow_buffer_free(&finder.value);
+    return status;
+}
+
+enum windrow_status windrow_suggest_aliases(const char *path, uint64_t memory_bytes, const char *out_path, struct windrow_variant_counts *counts,
+                                            const struct windrow_watch *watch)
+{
+    struct windrow_store *store = NULL;
+    struct windrow_meter meter;
+    *counts = (struct windrow_variant_counts){0};
+    windrow_meter_start(&meter, watch ? watch : &(struct windrow_watch){0});
+    char *scratch = windrow_path(path, "ledger/variants-%d", (int)getpid());
+    enum windrow_status status = scratch ? windrow_store_open(path, &store) : windrow_fail(WINDROW_RESOURCE, "out of memory for a path");
+    if (!status)
+        status = windrow_directory_make(scratch);
+    if (!status) {
+        windrow_meter_stage(&meter, "looking for variants of URLs", "pages", windrow_store_facts(store)->pages);
+        status = windrow_variants_find(store, scratch, memory_bytes / 20 * 19, out_path, counts, &meter);
+        windrow_meter_stage_end(&meter);
+        enum windrow_status removed = windrow_directory_remove(scratch);
+        status = status ? status : removed;
+    }
+    windrow_store_close(store);
+    windrow_meter_finish(&meter);
+    free(scratch);
+    return status;
+}
