@@ -30,6 +30,16 @@ static inline void trim_field(const char **start, const char **end)
         ++*start;
 }
 
+/* The end of the field that begins at `start`: a TAB, or among ids any white space; NULL when it is the line's last. */
+static inline const char *field_end(enum windrow_dump_shape shape, const char *start, const char *end)
+{
+    if (shape != WINDROW_DUMP_IDS)
+        return memchr(start, '\t', (size_t)(end - start));
+    while (start < end && !is_blank(*start))
+        start++;
+    return start < end ? start : NULL;
+}
+
 void windrow_dump_lines_begin(struct windrow_dump_lines *lines, const struct windrow_dump_chunk *chunk)
 {
     *lines = (struct windrow_dump_lines){
@@ -87,10 +97,12 @@ bool windrow_dump_lines_next(struct windrow_dump_lines *lines, struct windrow_du
         trim_end(start, &last);
         if (last == start)
             continue;
-        const char *tab = memchr(start, '\t', (size_t)(end - start));
-        const char *source_end = tab != NULL ? tab : end;
         line->text = start;
         line->text_bytes = (size_t)(end - start);
+        while (lines->shape == WINDROW_DUMP_IDS && is_blank(*start))
+            start++;
+        const char *tab = field_end(lines->shape, start, end);
+        const char *source_end = tab != NULL ? tab : end;
         line->source = start;
         trim_field(&line->source, &source_end);
         line->source_bytes = (size_t)(source_end - line->source);
@@ -113,7 +125,7 @@ bool windrow_dump_line_target(struct windrow_dump_line *line, struct windrow_dum
     while (line->rest != NULL) {
         const char *start = line->rest, *end = line->rest_end;
         bool pair = line->shape == WINDROW_DUMP_PAIRS;
-        const char *tab = pair ? NULL : memchr(start, '\t', (size_t)(end - start));
+        const char *tab = pair ? NULL : field_end(line->shape, start, end);
         line->rest = tab != NULL ? tab + 1 : NULL;
         if (tab != NULL)
             end = tab;

@@ -13,7 +13,7 @@
  *   }
  *
  * Texts are spans of the chunk, with surrounding white space trimmed, not ended by a NUL, and may hold any
- * byte but TAB and newline; they are not looked at any further: whether they are URLs, the keyer says.
+ * byte but TAB and newline (in a dump of ids no white space at all); they are not looked at any further: whether they are URLs or numbers, others say.
  * Ownership: a chunk owns its text. Threads: walking reads the chunk and writes only the caller's own structs, so that
  * different threads may walk through one chunk, or copies of a `lines` taken on the way.
  */
@@ -45,7 +45,7 @@ struct windrow_dump_chunk {
     char *text;
     size_t bytes; /* 0: the dumps are at their end */
     size_t capacity_bytes;
-    enum windrow_dump_shape shape; /* pairs or lists */
+    enum windrow_dump_shape shape; /* any but WINDROW_DUMP_AUTO */
     uint64_t file;
     uint64_t first_line; /* number of its first line in the file, from 1 */
     bool continued;      /* the first line goes on with a long line whose source is repeated */

@@ -18,6 +18,7 @@ struct windrow_dump {
     const char *const *paths;
     size_t path_count;
     enum windrow_dump_shape forced_shape;
+    bool with_ids;
     size_t chunk_bytes;
     uint64_t total_bytes;
     atomic_uint_fast64_t consumed_bytes;
@@ -116,10 +117,8 @@ static enum windrow_status shape_find(struct windrow_dump *dump)
     size_t sample_bytes = dump->pending.bytes < WINDROW_DUMP_SAMPLE_BYTES ? dump->pending.bytes : WINDROW_DUMP_SAMPLE_BYTES;
     bool whole = dump->stream_ended && sample_bytes == dump->pending.bytes;
     dump->shape = windrow_dump_shape_recognise((const char *)dump->pending.data, sample_bytes, whole);
-    if (dump->shape == WINDROW_DUMP_IDS)
-        return windrow_fail(WINDROW_USAGE,
-                            "%s holds numeric ids, and shape ids is not supported yet; dumps hold URLs, "
-                            "as pairs or lists (--shape)",
+    if (dump->shape == WINDROW_DUMP_IDS && !dump->with_ids)
+        return windrow_fail(WINDROW_USAGE, "%s holds numeric ids; say with --names FILE what they stand for",
                             windrow_dump_file_name(dump, dump->file));
     return WINDROW_OK;
 }
@@ -155,6 +154,21 @@ static enum windrow_status field_append(struct windrow_buffer *buffer, size_t fi
     return windrow_buffer_append(buffer, text, bytes);
 }
 
+static bool is_blank(char byte)
+{
+    return byte == ' ' || (byte >= '\t' && byte <= '\r');
+}
+
+/* The next end of a field: a TAB, or among ids any white space; NULL when there is none. */
+static const char *field_end(const struct windrow_dump *dump, const char *at, const char *end)
+{
+    if (dump->shape != WINDROW_DUMP_IDS)
+        return memchr(at, '\t', (size_t)(end - at));
+    while (at < end && !is_blank(*at))
+        at++;
+    return at < end ? at : NULL;
+}
+
 /* Reads the file again up to the position, and checks that it is the same. */
 static enum windrow_status file_skip(struct windrow_dump *dump, const struct windrow_dump_position *position)
 {
@@ -179,8 +193,10 @@ static enum windrow_status file_skip(struct windrow_dump *dump, const struct win
             source_ended = false;
             start = newline + 1;
         }
+        while (!source_ended && dump->shape == WINDROW_DUMP_IDS && !dump->source.bytes && start < end && is_blank(*start))
+            start++;
         if (!source_ended) {
-            const char *tab = memchr(start, '\t', (size_t)(end - start));
+            const char *tab = field_end(dump, start, end);
             source_ended = tab != NULL;
             status = field_append(&dump->source, 0, start, (size_t)((tab != NULL ? tab : end) - start));
             if (status != WINDROW_OK)
@@ -231,8 +247,8 @@ enum windrow_status windrow_dump_open(const struct windrow_dump_options *options
     *out = NULL;
     if (options->path_count == 0)
         return windrow_fail(WINDROW_USAGE, "no dump is named; name files, or - for standard input");
-    if (options->shape == WINDROW_DUMP_IDS)
-        return windrow_fail(WINDROW_USAGE, "shape ids is not supported yet; dumps hold URLs, as pairs or lists (--shape)");
+    if (options->shape == WINDROW_DUMP_IDS && !options->with_ids)
+        return windrow_fail(WINDROW_USAGE, "dumps of shape ids need their names; say with --names FILE what the ids stand for");
     if (resume != NULL && resume->file > options->path_count)
         return windrow_fail(WINDROW_INPUT, "this job began with more dumps than the %zu named now; name the same ones",
                             options->path_count);
@@ -242,6 +258,7 @@ enum windrow_status windrow_dump_open(const struct windrow_dump_options *options
     dump->paths = options->paths;
     dump->path_count = options->path_count;
     dump->forced_shape = options->shape;
+    dump->with_ids = options->with_ids;
     dump->chunk_bytes = options->chunk_bytes != 0 ? options->chunk_bytes : WINDROW_DUMP_CHUNK_BYTES;
     dump->file = resume != NULL ? (size_t)resume->file : 0;
     dump->hash = XXH3_createState();
@@ -284,17 +301,18 @@ struct piece {
 static bool blank(const uint8_t *text, size_t bytes)
 {
     for (size_t i = 0; i < bytes; i++)
-        if (text[i] != ' ' && (text[i] < '\t' || text[i] > '\r'))
+        if (!is_blank((char)text[i]))
             return false;
     return true;
 }
 
-/* Ends a field at its TAB: blank targets are forgotten, so that no piece is without a target. */
-static enum windrow_status piece_field_end(struct piece *piece)
+/* Ends a field at its TAB: blank targets are forgotten, so that no piece is without a target (and among ids, where white space is no field,
+ * blank sources). */
+static enum windrow_status piece_field_end(struct piece *piece, bool ids)
 {
     struct windrow_buffer *text = piece->text;
     size_t field_bytes = text->bytes - piece->field_start;
-    if (piece->fields > 0 && field_bytes <= WINDROW_DUMP_FIELD_BYTES_MAX &&
+    if ((piece->fields > 0 || ids) && field_bytes <= WINDROW_DUMP_FIELD_BYTES_MAX &&
         blank(text->data + piece->field_start, field_bytes)) {
         text->bytes = piece->field_start;
         return WINDROW_OK;
@@ -325,13 +343,13 @@ static enum windrow_status list_piece_read(struct windrow_dump *dump, struct win
         const char *end = newline != NULL ? newline : start + bytes;
         bool full = false;
         while (status == WINDROW_OK && at < end && !full) {
-            const char *tab = memchr(at, '\t', (size_t)(end - at));
+            const char *tab = field_end(dump, at, end);
             status = field_append(text, piece.field_start, at, (size_t)((tab != NULL ? tab : end) - at));
             at = tab != NULL ? tab + 1 : end;
             if (tab != NULL && status == WINDROW_OK) {
                 bool source = piece.fields == 0;
-                status = piece_field_end(&piece);
-                if (source && status == WINDROW_OK) {
+                status = piece_field_end(&piece, dump->shape == WINDROW_DUMP_IDS);
+                if (source && piece.fields == 1 && status == WINDROW_OK) {
                     dump->source.bytes = 0;
                     status = windrow_buffer_append(&dump->source, text->data, text->bytes);
                 }

@@ -1,7 +1,7 @@
 /* reader: dump files, one after another, as chunks of whole lines.
  *
  * One thread reads (and decompresses); others walk through the chunks with dump/chunk.h. A chunk ends at a line's end. Only
- * a line longer than a chunk is handed out in pieces: a list is split at a TAB, its source repeated in front of each
+ * a line longer than a chunk is handed out in pieces: a list (of ids, too) is split between two targets, its source repeated in front of each
  * further piece (chunk.continued); a pair is never split. Very long fields and lines are cut as dump/chunk.h says, so
  * that no input needs more memory than a chunk, about two fields, and the sample of a file's beginning.
  *
@@ -28,6 +28,7 @@ struct windrow_dump_options {
     const char *const *paths; /* "-" is standard input; must outlive the reader */
     size_t path_count;
     enum windrow_dump_shape shape; /* WINDROW_DUMP_AUTO recognises it for each file */
+    bool with_ids;                 /* ids are welcome: the caller knows their names */
     size_t chunk_bytes;            /* 0: WINDROW_DUMP_CHUNK_BYTES */
 };
 
@@ -39,7 +40,7 @@ struct windrow_dump;
  *          there, files before it are not touched. WINDROW_INPUT when it is not the same stream.
  *
  * WINDROW_INPUT when a file cannot be opened; all are looked at, so that a misspelt name is known at once.
- * WINDROW_USAGE when standard input is named twice, no file is named, or the shape is ids.
+ * WINDROW_USAGE when standard input is named twice, no file is named, or the shape is ids and they are not welcome.
  * *dump is NULL on failure.
  */
 enum windrow_status windrow_dump_open(const struct windrow_dump_options *options,
@@ -47,7 +48,7 @@ enum windrow_status windrow_dump_open(const struct windrow_dump_options *options
 
 /* Reads the next chunk, into memory that is used again or grown; chunk->bytes is 0 when there are no more.
  *
- * WINDROW_INPUT for damaged or unreadable files, WINDROW_USAGE for a file of numeric ids, WINDROW_RESOURCE without
+ * WINDROW_INPUT for damaged or unreadable files, WINDROW_USAGE for a file of ids that are not welcome, WINDROW_RESOURCE without
  * memory; the chunk then holds nothing, and the reader can only be closed.
  */
 enum windrow_status windrow_dump_read(struct windrow_dump *dump, struct windrow_dump_chunk *chunk);

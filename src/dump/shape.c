@@ -59,18 +59,18 @@ const char *windrow_dump_shape_name(enum windrow_dump_shape shape)
     }
 }
 
+/* Whole numbers, with white space around and between them. */
 static bool field_numeric(const char *field, size_t bytes)
 {
-    while (bytes > 0 && is_blank(field[bytes - 1]))
-        bytes--;
-    while (bytes > 0 && is_blank(*field)) {
-        field++;
-        bytes--;
-    }
-    for (size_t i = 0; i < bytes; i++)
+    bool digits = false;
+    for (size_t i = 0; i < bytes; i++) {
+        if (is_blank(field[i]))
+            continue;
         if (field[i] < '0' || field[i] > '9')
             return false;
-    return bytes > 0;
+        digits = true;
+    }
+    return digits;
 }
 
 /* What the lines say. */

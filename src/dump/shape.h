@@ -2,7 +2,7 @@
  *
  *   pairs   source TAB target [TAB rel tokens]
  *   lists   source TAB target TAB target ...
- *   ids     numeric pairs (recognised, not yet read)
+ *   ids     numbers: source target [target ...], between TABs or other white space
  *
  * In every shape a line with a source alone says that the page was fetched and has no links.
  * Threads: every function touches nothing but its arguments.
@@ -13,7 +13,7 @@
 #include <stdbool.h>
 #include <stddef.h>
 
-/* The first three have the values of the public enum windrow_shape. */
+/* The values are those of the public enum windrow_shape. */
 enum windrow_dump_shape {
     WINDROW_DUMP_AUTO, /* to be recognised, file by file */
     WINDROW_DUMP_PAIRS,
@@ -30,7 +30,8 @@ enum windrow_dump_shape {
  * sample, bytes   the beginning of the file; lines after the 1,000th are not looked at
  * whole           the file ends with the sample, so that its last line is complete without a newline
  *
- * Blank lines do not count, nor do blank fields at the end of a line. Where all fields of all lines are numbers: ids.
+ * Blank lines do not count, nor do blank fields at the end of a line. Where all lines hold only
+ * numbers, between TABs or other white space: ids.
  * Otherwise a third field made of rel tokens only speaks for pairs, a third field that is something else, and
  * a fourth field, for lists. The larger number of lines wins (a few damaged lines do not turn a
  * file's meaning over); with equal numbers above zero it is pairs, since no list holds rel tokens. Lines of one or

@@ -1,7 +1,8 @@
 #include "windrow.h"
 
 #include "base/crew.h"
-#include "shard/alias.h"
+#include "dump/paths.h"
+#include "shard/fold.h"
 #include "shard/job.h"
 #include "shard/linkmerge.h"
 #include "shard/old.h"
@@ -24,6 +25,7 @@
 /* The stages of a job, in order; each is made of tasks that leave durable files and a mark in the ledger, so
  * that any of them can be gone on with:
  *
+ *   tables    names, aliases -> sorted tables         "names", "aliases"          (fold.c)
  *   reading   dumps -> batches                       marks: "reading", "run/N"   (reading.c)
  *   pages     key runs -> parts                      "part/N"                    (part.c)
  *   table     parts -> page table of each segment    "table/N"                   (table.c)
@@ -44,7 +46,8 @@ struct job {
     struct windrow_ledger *ledger;
     struct windrow_crew *crew;
     struct windrow_meter meter;
-    struct windrow_alias *alias;
+    struct windrow_fold fold;
+    uint64_t fold_fingerprint;
     struct windrow_store *old;           /* the earlier store; NULL: none */
     struct windrow_reading_state reading;
     uint64_t *run_pages;
@@ -179,7 +182,7 @@ static enum windrow_status read_dumps(struct job *job)
     if (status == WINDROW_NO)
         status = WINDROW_OK;
     if (!status && !job->reading.finished) {
-        struct windrow_reading reading = {.options = job->options, .alias = job->alias, .scratch = job->scratch, .log_path = job->log_path,
+        struct windrow_reading reading = {.options = job->options, .fold = &job->fold, .scratch = job->scratch, .log_path = job->log_path,
                                           .ledger = job->ledger, .crew = job->crew, .meter = &job->meter, .memory_bytes = job->memory_bytes};
         windrow_meter_stage(&job->meter, "reading dumps", "URLs", 0);
         status = windrow_reading_run(&reading, &job->reading);
@@ -379,56 +382,10 @@ static enum windrow_status add_segments(struct job *job, struct windrow_manifest
 static enum windrow_status write_aliases(struct job *job, struct windrow_manifest *manifest)
 {
     struct windrow_store *store = NULL;
-    struct windrow_page_reader *reader = NULL;
-    struct windrow_pages_writer table = {.file.descriptor = -1};
-    struct windrow_writer flat = {.descriptor = -1};
-    struct windrow_buffer before = {0};
-    char *paths[3] = {windrow_path(job->store, "aliases.zst"), windrow_path(job->store, "alias-index"), windrow_path(job->store, "alias-keys")};
-    enum windrow_status status = paths[0] && paths[1] && paths[2] ? windrow_store_open_manifest(job->store, manifest, &store) : memory();
+    enum windrow_status status = windrow_store_open_manifest(job->store, manifest, &store);
     if (!status)
-        status = windrow_page_reader_create(store, &reader);
-    if (!status)
-        status = windrow_pages_writer_open(&table, paths[0], 0, true);
-    for (uint64_t position = 0; !status && position < windrow_alias_count(job->alias); position++) {
-        const char *key, *folded;
-        size_t key_bytes, folded_bytes;
-        uint64_t page;
-        windrow_alias_at(job->alias, position, &key, &key_bytes, &folded, &folded_bytes);
-        status = windrow_page_reader_find_key(reader, folded, folded_bytes, &page);
-        if (status == WINDROW_NO) {
-            status = WINDROW_OK; /* what it stands for is not in the crawl */
-            continue;
-        }
-        size_t shared = 0;
-        while (shared < before.bytes && shared < key_bytes && before.data[shared] == (uint8_t)key[shared])
-            shared++;
-        if (!status)
-            status = windrow_pages_put(&table, (const uint8_t *)key, key_bytes, shared, page);
-        before.bytes = 0;
-        if (!status)
-            status = windrow_buffer_append(&before, key, key_bytes);
-    }
-    uint64_t bytes, checksum;
-    if (!status)
-        status = windrow_pages_writer_finish(&table, &bytes, &checksum);
-    struct windrow_pages_mark last = {table.next_entry, 0, table.first_keys.bytes};
-    if (!status)
-        status = windrow_buffer_append(&table.marks, &last, sizeof last);
-    for (int file = 1; !status && file < 3; file++) {
-        const struct windrow_buffer *content = file == 1 ? &table.marks : &table.first_keys;
-        status = windrow_writer_open(&flat, paths[file], false);
-        if (!status)
-            status = windrow_writer_append(&flat, content->data, content->bytes);
-        if (!status)
-            status = windrow_writer_finish(&flat, NULL);
-        windrow_writer_abandon(&flat);
-    }
-    windrow_pages_writer_free(&table);
-    windrow_buffer_free(&before);
-    windrow_page_reader_destroy(reader);
+        status = windrow_alias_write(job->scratch, store, job->store, job->memory_bytes);
     windrow_store_close(store);
-    for (int file = 0; file < 3; file++)
-        free(paths[file]);
     return status;
 }
 
@@ -468,7 +425,7 @@ static enum windrow_status finish(struct job *job)
         if (status)
             return status;
     }
-    if (job->alias && windrow_alias_count(job->alias)) {
+    if (job->fold.aliases.count) {
         status = describe(job, &manifest, false);
         if (!status)
             status = write_aliases(job, &manifest);
@@ -477,7 +434,7 @@ static enum windrow_status finish(struct job *job)
             status = windrow_directory_sync(job->store);
     }
     if (!status)
-        status = describe(job, &manifest, job->alias && windrow_alias_count(job->alias));
+        status = describe(job, &manifest, job->fold.aliases.count);
     if (!status)
         status = windrow_manifest_write(job->store, &manifest);
     windrow_manifest_free(&manifest);
@@ -487,27 +444,26 @@ static enum windrow_status finish(struct job *job)
 /* ---- The job ---- */
 
 /* What must stay the same when a job is gone on with. Names of dumps, not their contents: those are checked as they are read. */
-static uint64_t settings_fingerprint(const struct windrow_shard_options *options, const struct windrow_alias *alias, const struct windrow_store *old)
+static uint64_t settings_fingerprint(const struct windrow_shard_options *options, uint64_t fold_fingerprint, const struct windrow_store *old)
 {
     uint64_t sum = XXH3_64bits_withSeed(&options->shape, sizeof options->shape, options->keep_nofollow);
     for (size_t dump = 0; dump < options->dump_count; dump++)
         sum = XXH3_64bits_withSeed(options->dumps[dump], strlen(options->dumps[dump]) + 1, sum);
     if (old)
         sum = XXH3_64bits_withSeed(&windrow_store_facts(old)->fingerprint, sizeof(uint64_t), sum);
-    uint64_t aliases = alias ? windrow_alias_fingerprint(alias) : 0;
-    return XXH3_64bits_withSeed(&aliases, sizeof aliases, sum);
+    return XXH3_64bits_withSeed(&fold_fingerprint, sizeof fold_fingerprint, sum);
 }
 
 static enum windrow_status check_settings(struct job *job)
 {
-    uint64_t now = settings_fingerprint(job->options, job->alias, job->old), then;
+    uint64_t now = settings_fingerprint(job->options, job->fold_fingerprint, job->old), then;
     enum windrow_status status = windrow_ledger_get(job->ledger, "settings", &then, sizeof then);
     if (status == WINDROW_NO) {
         struct windrow_ledger_record record = {"settings", &now, sizeof now};
         return windrow_ledger_commit(job->ledger, &record, 1);
     }
     if (!status && now != then)
-        status = windrow_fail(WINDROW_USAGE, "%s was begun from other dumps or with other settings (--shape, --nofollow, --aliases, --add); name another --out, "
+        status = windrow_fail(WINDROW_USAGE, "%s was begun from other dumps or with other settings (--shape, --nofollow, --names, --aliases, --drop, --add); name another --out, "
                                              "or remove it first", job->store);
     return status;
 }
@@ -534,11 +490,8 @@ static enum windrow_status open_job(struct job *job)
     if ((status = windrow_directory_make(ledger_path)) || (status = windrow_ledger_lock(lock_path, &job->lock)) ||
         (status = windrow_ledger_open(ledger_path, false, &job->ledger)))
         goto out;
-    if (job->options->aliases) {
-        uint64_t bad_lines;
-        if ((status = windrow_alias_load(job->options->aliases, &job->alias, &bad_lines)))
-            goto out;
-    }
+    if ((status = windrow_fold_open(job->options, job->scratch, &job->fold, &job->fold_fingerprint)))
+        goto out;
     if (job->options->add && (status = windrow_store_open(job->options->add, &job->old)))
         goto out;
     if ((status = check_settings(job)) || (status = windrow_directory_make(job->scratch)) || (status = windrow_directory_make(pages_path)) ||
@@ -557,7 +510,7 @@ static void close_job(struct job *job)
 {
     windrow_ledger_close(job->ledger);
     windrow_crew_destroy(job->crew);
-    windrow_alias_free(job->alias);
+    windrow_fold_close(&job->fold);
     windrow_store_close(job->old);
     windrow_part_plan_free(&job->plan);
     windrow_meter_finish(&job->meter);
@@ -576,7 +529,7 @@ static enum windrow_status work(struct job *job)
     enum windrow_status status;
     struct mapped mapped = {.core_map.descriptor = -1, .hosts.descriptor = -1};
     double began = windrow_seconds();
-    if ((status = read_dumps(job)))
+    if ((status = windrow_fold_prepare(&job->fold, job->options, job->ledger, job->memory_bytes, &job->meter)) || (status = read_dumps(job)))
         return status;
     if ((status = merge_pages(job)) || (status = write_table(job)) || (status = remap_links(job)))
         return status;
@@ -628,12 +581,10 @@ static void raise_file_limit(void)
     }
 }
 
-enum windrow_status windrow_shard(const struct windrow_shard_options *options, bool *already_done)
+static enum windrow_status shard(const struct windrow_shard_options *options, bool *already_done)
 {
-    enum windrow_status status = check_options(options);
-    if (already_done)
-        *already_done = false;
-    if (status || (status = check_place(options->out)))
+    enum windrow_status status = check_place(options->out);
+    if (status)
         return status;
     raise_file_limit();
     struct job job = {.options = options, .store = options->out, .lock = -1,
@@ -662,5 +613,21 @@ out:;
     close_job(&job);
     if (hopeless)
         windrow_directory_remove(options->out);
+    return status;
+}
+
+enum windrow_status windrow_shard(const struct windrow_shard_options *options, bool *already_done)
+{
+    enum windrow_status status = check_options(options);
+    if (already_done)
+        *already_done = false;
+    struct windrow_dump_paths paths = {0};
+    if (status || (status = windrow_dump_paths_expand(options->dumps, options->dump_count, &paths)))
+        return status;
+    struct windrow_shard_options expanded = *options;
+    expanded.dumps = (const char *const *)paths.paths;
+    expanded.dump_count = paths.count;
+    status = shard(&expanded, already_done);
+    windrow_dump_paths_free(&paths);
     return status;
 }

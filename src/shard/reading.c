@@ -13,15 +13,19 @@
 #define BAD_FIELDS_LEAST 100000    /* fields before the share of malformed ones means anything */
 #define BATCH_SECONDS_MOST 300.0   /* a slow stream is written down this often all the same */
 
+struct reader;
+
 struct worker {
     struct windrow_batch *batch;
     struct windrow_keyer *keyer;
     struct windrow_dump_chunk chunk;
-    struct windrow_buffer samples;
+    struct windrow_buffer samples, source;
+    char id[WINDROW_NAMES_KEY_BYTES];
     uint64_t sample_count;
     uint64_t lines, fields, bad_fields;
     uint64_t dropped[WINDROW_DROP_COUNT];
     struct windrow_batch_counts written;
+    struct reader *reader;
 };
 
 struct reader {
@@ -37,16 +41,16 @@ struct reader {
     struct worker *workers;
 };
 
-/* Notes a malformed line for the log: file, line, reason, the beginning of the text with control bytes escaped. */
-static enum windrow_status sample(struct reader *reader, struct worker *worker, const struct windrow_dump_line *line, const char *text, size_t bytes,
+/* Notes a malformed line or field for the log: file, line, reason, the beginning of the text with control bytes escaped. */
+static enum windrow_status sample(struct reader *reader, struct worker *worker, uint64_t line, uint64_t file, const char *text, size_t bytes,
                                   const char *reason)
 {
     if (reader->state->samples + worker->sample_count >= SAMPLES_MOST)
         return WINDROW_OK;
     worker->sample_count++;
     char place[512];
-    int length = snprintf(place, sizeof place, "%s\t%llu\t%s\t", windrow_dump_file_name(reader->dump, worker->chunk.file),
-                          (unsigned long long)line->number, reason);
+    int length = snprintf(place, sizeof place, "%s\t%llu\t%s\t", windrow_dump_file_name(reader->dump, file), (unsigned long long)line,
+                          reason);
     enum windrow_status status = windrow_buffer_append(&worker->samples, place, (size_t)length < sizeof place ? (size_t)length : sizeof place - 1);
     for (size_t at = 0; !status && at < bytes && at < SAMPLE_TEXT_BYTES; at++) {
         char escaped[5];
@@ -60,15 +64,33 @@ static enum windrow_status sample(struct reader *reader, struct worker *worker, 
     return status ? status : windrow_buffer_append(&worker->samples, "\n", 1);
 }
 
-/* The page key of a field, aliases folded; counts the field. *key is NULL when it has none, and *reason says why. */
+/* The key of a number in a dump of ids. */
+static bool id_key(struct worker *worker, const char *text, size_t bytes, const char **key, size_t *key_bytes)
+{
+    uint64_t id;
+    if (!windrow_names_number(text, bytes, &id))
+        return false;
+    windrow_names_key(id, worker->id);
+    *key = worker->id;
+    *key_bytes = sizeof worker->id;
+    return true;
+}
+
+/* The key of a field; counts the field. *key is NULL when it has none, and *reason says why. */
 static enum windrow_status field_key(struct reader *reader, struct worker *worker, const struct windrow_dump_line *line, const char *text, size_t bytes,
                                      const char **key, size_t *key_bytes, enum windrow_drop *reason)
 {
     worker->fields++;
+    if (line->shape == WINDROW_DUMP_IDS) {
+        if (id_key(worker, text, bytes, key, key_bytes))
+            return WINDROW_OK;
+        *key = NULL;
+        *reason = WINDROW_DROP_MALFORMED;
+        worker->bad_fields++;
+        return sample(reader, worker, line->number, worker->chunk.file, text, bytes, "not a whole number below 2^64; is --shape ids right?");
+    }
     switch (windrow_keyer_key(worker->keyer, text, bytes, key, key_bytes)) {
     case WINDROW_URL_OK:
-        if (reader->reading->alias)
-            windrow_alias_find(reader->reading->alias, *key, *key_bytes, key, key_bytes);
         return WINDROW_OK;
     case WINDROW_URL_SCHEME:
         *key = NULL;
@@ -80,8 +102,35 @@ static enum windrow_status field_key(struct reader *reader, struct worker *worke
         *key = NULL;
         *reason = WINDROW_DROP_MALFORMED;
         worker->bad_fields++;
-        return sample(reader, worker, line, text, bytes, "not a usable URL");
+        return sample(reader, worker, line->number, worker->chunk.file, text, bytes, "not a usable URL");
     }
+}
+
+/* A line whose source is to be taken down: its links are counted for the first reason that fits, which is never `duplicate`,
+ * and the page with its line is gone. */
+static enum windrow_status take_dropped_line(struct reader *reader, struct worker *worker, struct windrow_dump_line *line, const char *source,
+                                             size_t source_bytes)
+{
+    enum windrow_status status;
+    struct windrow_dump_target target;
+    const char *key;
+    size_t key_bytes;
+    enum windrow_drop reason = WINDROW_DROP_MALFORMED;
+    worker->source.bytes = 0;
+    if ((status = windrow_buffer_append(&worker->source, source, source_bytes)))
+        return status;
+    while (windrow_dump_line_target(line, &target)) {
+        if ((status = field_key(reader, worker, line, target.text, target.bytes, &key, &key_bytes, &reason)))
+            return status;
+        if (key && target.nofollow && !reader->reading->options->keep_nofollow)
+            reason = WINDROW_DROP_NOFOLLOW;
+        else if (key && key_bytes == source_bytes && memcmp(key, worker->source.data, key_bytes) == 0)
+            reason = WINDROW_DROP_SELF;
+        else if (key)
+            reason = WINDROW_DROP_TAKEDOWN;
+        worker->dropped[reason]++;
+    }
+    return WINDROW_OK;
 }
 
 static enum windrow_status take_line(struct reader *reader, struct worker *worker, struct windrow_dump_line *line)
@@ -96,8 +145,10 @@ static enum windrow_status take_line(struct reader *reader, struct worker *worke
         worker->fields++;
         worker->bad_fields++;
         worker->dropped[WINDROW_DROP_MALFORMED]++;
-        return sample(reader, worker, line, line->text, line->text_bytes, line->malformed);
+        return sample(reader, worker, line->number, worker->chunk.file, line->text, line->text_bytes, line->malformed);
     }
+    if (line->shape == WINDROW_DUMP_IDS)
+        windrow_batch_place(worker->batch, worker->chunk.file, line->number);
     if ((status = field_key(reader, worker, line, line->source, line->source_bytes, &key, &key_bytes, &reason)))
         return status;
     if (!key) {
@@ -108,6 +159,10 @@ static enum windrow_status take_line(struct reader *reader, struct worker *worke
         worker->dropped[reason] += links ? links : !line->continued;
         return WINDROW_OK;
     }
+    bool ids = line->shape == WINDROW_DUMP_IDS;
+    const struct windrow_drop_set *drop = reader->reading->fold->drop;
+    if (drop && !ids && windrow_drop_has(drop, key, key_bytes))
+        return take_dropped_line(reader, worker, line, key, key_bytes);
     if ((status = windrow_batch_source(worker->batch, key, key_bytes)))
         return status;
     while (windrow_dump_line_target(line, &target)) {
@@ -119,6 +174,10 @@ static enum windrow_status take_line(struct reader *reader, struct worker *worke
         }
         if (target.nofollow && !reader->reading->options->keep_nofollow) {
             worker->dropped[WINDROW_DROP_NOFOLLOW]++;
+            continue;
+        }
+        if (drop && !ids && windrow_drop_has(drop, key, key_bytes)) {
+            worker->dropped[WINDROW_DROP_TAKEDOWN]++;
             continue;
         }
         bool self;
@@ -196,6 +255,14 @@ static enum windrow_status fill(void *context, uint64_t task, unsigned crew_work
     }
 }
 
+static enum windrow_status sample_unnamed(void *context, uint64_t file, uint64_t line, uint64_t id)
+{
+    struct worker *worker = context;
+    char text[32];
+    int bytes = snprintf(text, sizeof text, "%llu", (unsigned long long)id);
+    return sample(worker->reader, worker, line, file, text, (size_t)bytes, "id without a name");
+}
+
 static enum windrow_status write(void *context, uint64_t task, unsigned crew_worker)
 {
     (void)crew_worker;
@@ -213,7 +280,7 @@ static enum windrow_status write(void *context, uint64_t task, unsigned crew_wor
     if (!key_path || !link_path)
         status = windrow_fail(WINDROW_RESOURCE, "out of memory for a path");
     if (!status)
-        status = windrow_batch_write(worker->batch, key_path, link_path, &worker->written);
+        status = windrow_batch_write(worker->batch, key_path, link_path, sample_unnamed, worker, &worker->written);
     free(key_path);
     free(link_path);
     return status;
@@ -254,9 +321,9 @@ static enum windrow_status commit(struct reader *reader, unsigned workers, const
         struct worker *worker = &reader->workers[index];
         state->lines += worker->lines;
         state->fields += worker->fields;
-        state->bad_fields += worker->bad_fields;
+        state->bad_fields += worker->bad_fields + worker->written.bad_fields;
         for (int drop = 0; drop < WINDROW_DROP_COUNT; drop++)
-            state->dropped[drop] += worker->dropped[drop];
+            state->dropped[drop] += worker->dropped[drop] + worker->written.dropped[drop];
         state->dropped[WINDROW_DROP_DUPLICATE] += worker->written.duplicates;
         state->links += worker->written.links;
         worker->lines = worker->fields = worker->bad_fields = 0;
@@ -295,11 +362,15 @@ static enum windrow_status read_all(struct reader *reader, unsigned workers)
             break;
         for (unsigned index = 0; index < workers; index++)
             wrote[index] = !windrow_batch_empty(reader->workers[index].batch);
-        if (reader->ended && (status = check_share(reader))) {
+        if ((status = windrow_crew_run(reader->reading->crew, workers, write, reader)))
+            break;
+        for (unsigned index = 0; index < workers; index++)
+            reader->bad_fields += reader->workers[index].written.bad_fields;
+        if ((reader->ended || reader->fields >= BAD_FIELDS_LEAST) && (status = check_share(reader))) {
             write_log(reader, workers);
             break;
         }
-        if ((status = windrow_crew_run(reader->reading->crew, workers, write, reader)) || (status = commit(reader, workers, wrote)))
+        if ((status = commit(reader, workers, wrote)))
             break;
         if (reader->ended)
             break;
@@ -317,16 +388,22 @@ enum windrow_status windrow_reading_run(const struct windrow_reading *reading, s
     unsigned workers = windrow_crew_workers(reading->crew);
     struct reader reader = {.reading = reading, .state = state, .fields = state->fields, .bad_fields = state->bad_fields};
     struct windrow_dump_options options = {.paths = reading->options->dumps, .path_count = reading->options->dump_count,
-                                           .shape = (enum windrow_dump_shape)reading->options->shape};
+                                           .shape = (enum windrow_dump_shape)reading->options->shape,
+                                           .with_ids = reading->fold->with_names};
     pthread_mutex_init(&reader.lock, NULL);
     reader.workers = calloc(workers, sizeof *reader.workers);
     enum windrow_status status = reader.workers ? WINDROW_OK : windrow_fail(WINDROW_RESOURCE, "out of memory for the batches");
+    uint64_t batches_bytes = reading->memory_bytes - windrow_drop_memory_bytes(reading->fold->drop);
+    if (!status && batches_bytes > reading->memory_bytes)
+        status = windrow_fail(WINDROW_RESOURCE, "the URLs and hosts to drop alone take %llu MiB; name a larger --memory",
+                              (unsigned long long)(windrow_drop_memory_bytes(reading->fold->drop) >> 20));
     bool begun = state->position.bytes || state->position.file;
     if (!status)
         status = windrow_dump_open(&options, begun ? &state->position : NULL, &reader.dump);
     reader.position = state->position;
     for (unsigned index = 0; !status && index < workers; index++) {
-        status = windrow_batch_create(reading->memory_bytes / workers, &reader.workers[index].batch);
+        reader.workers[index].reader = &reader;
+        status = windrow_batch_create(batches_bytes / workers, reading->fold, &reader.workers[index].batch);
         if (!status)
             status = windrow_keyer_create(&reader.workers[index].keyer);
     }
@@ -337,6 +414,7 @@ enum windrow_status windrow_reading_run(const struct windrow_reading *reading, s
         windrow_keyer_destroy(reader.workers[index].keyer);
         windrow_dump_chunk_free(&reader.workers[index].chunk);
         windrow_buffer_free(&reader.workers[index].samples);
+        windrow_buffer_free(&reader.workers[index].source);
     }
     free(reader.workers);
     windrow_dump_close(reader.dump);

@@ -11,7 +11,7 @@
 #include "base/crew.h"
 #include "base/meter.h"
 #include "dump/reader.h"
-#include "shard/alias.h"
+#include "shard/fold.h"
 #include "store/ledger.h"
 
 /* What reading has come to so far; the ledger's record "reading". */
@@ -31,7 +31,7 @@ struct windrow_reading_state {
 
 struct windrow_reading {
     const struct windrow_shard_options *options;
-    const struct windrow_alias *alias;  /* NULL: none */
+    const struct windrow_fold *fold;    /* what pages are brought to; all zero: they stay as they are */
     const char *scratch;
     const char *log_path;               /* malformed lines, sampled */
     struct windrow_ledger *ledger;

@@ -14,6 +14,11 @@ const char *windrow_domain(const char *host)
     return domain != NULL ? domain : host;
 }
 
+bool windrow_domain_top_level(const char *label)
+{
+    return psl_is_public_suffix2(psl_builtin(), label, PSL_TYPE_ICANN | PSL_TYPE_NO_STAR_RULE);
+}
+
 static char version[160];
 
 static void version_write(void)
