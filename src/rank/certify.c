@@ -1,8 +1,14 @@
-/* The certifying passes: over the rim, which gives the dangling pages their scores, and over the core.
+/* The certifying passes: over the core, in which nothing changes, and over the rim, which gives the dangling
+ * pages their scores. The core comes first: where its residual alone is too large, the rim is left out.
+ *
+ * Summing all equations of the linear system gives scale = sum(y) = (1-beta) + beta sum(y over the core) -
+ * sum(r), where r is the residual on the core (on the rim there is none but rounding). So before the passes
+ * the scale is known up to sum(r), which is bounded by what the core pass finds; and in q = r/scale + c v,
+ * c is -sum(r)/scale, up to rounding.
  *
  * With u = 2^-53, and k roundings in the sum over a page's in-links (kernel.h), the residual that the core
  * pass computes differs from the true one of the scores handed out by at most ((k+3) h + 4 y) u / scale and
- * what the constant c is off, 16 u v; h = (1-beta) v + beta sum, y the page's own entry. A dangling page's y
+ * 16 u v, for the constant c and the scale; h = (1-beta) v + beta sum, y the page's own entry. A dangling page's y
  * is such an h itself, so that its residual is c v, and rounding below (k+8) u x.
  */
 #include "rank/solver.h"
@@ -110,13 +116,14 @@ static enum windrow_status rim_barrier(void *context, uint64_t first, uint64_t e
 
 /* ---- The core ------------------------------------------------------------------------------ */
 
+/* Notes r without c v, by the scale as it is known so far. */
 static void note_core_page(struct windrow_solver *solver, struct windrow_class_table *table, uint64_t page, double sum, uint64_t links,
                            struct windrow_solver_slot *slot)
 {
     double jump = windrow_solver_jump(solver, page), beta = solver->options.beta, scale = solver->scale;
     double jump_entry = jump / (1 - beta), h = jump + beta * sum, y = solver->values[page] * solver->options.web->degrees[page];
     double rounding = (((windrow_kernel_roundings(links) + 3) * h + 4 * y) / scale + 16 * jump_entry) * unit;
-    double residual = fabs((h - y) / scale + solver->own->jump_excess * jump_entry) + rounding;
+    double residual = fabs(h - y) / scale + rounding;
     slot->sum += residual;
     slot->rounding += rounding;
     if (!(y > 0))
@@ -212,15 +219,28 @@ static void join_workers(struct windrow_solver *solver, struct windrow_class_tab
         windrow_class_table_join(table, &solver->own->tables[worker]);
 }
 
+/* What |c| v adds to the classes of the core. The scale that they were noted by was off by `slack`. */
+static void finish_core_classes(struct windrow_class_table *table, double beta, double excess, double slack)
+{
+    for (unsigned c = 0; c < WINDROW_CLASSES; c++) {
+        if (table->residual[c] == 0)
+            continue;
+        /* y is (1-beta) v at least, so v/x is at most scale/(1-beta), and the scale at most 1. */
+        double most = fmin(c > 0 ? windrow_class_least_jump(c - 1) : INFINITY, 1 / (1 - beta)) * (1 + 1e-11);
+        table->residual[c] = (table->residual[c] + excess * most) * (1 + slack);
+        table->rounding[c] *= 1 + slack;
+    }
+    table->least_score *= 1 - slack;
+}
+
 /* The rim's classes were by y/v. Each becomes entries of the class by x/v in which its pages with the least
  * v/x are, with the residual of those with the greatest. */
-static void add_rim_classes(const struct windrow_solver *solver, const struct windrow_class_table *rim, struct windrow_class_table *table)
+static void add_rim_classes(const struct windrow_solver *solver, const struct windrow_class_table *rim, double excess, struct windrow_class_table *table)
 {
-    double scale = solver->scale, beta = solver->options.beta, excess = fabs(solver->own->jump_excess) + 16 * unit;
+    double scale = solver->scale, beta = solver->options.beta;
     for (unsigned c = 0; c < WINDROW_CLASSES; c++) {
         if (rim->rounding[c] == 0)
             continue;
-        /* v/x of these pages lies between `least` and `most`; y is (1-beta) v at least, whatever the class. */
         double least = windrow_class_least_jump(c) * scale * (1 - 1e-11);
         double most = fmin(c > 0 ? windrow_class_least_jump(c - 1) * scale : INFINITY, scale / (1 - beta)) * (1 + 1e-11);
         unsigned to = windrow_class_of(1 / least);
@@ -228,6 +248,17 @@ static void add_rim_classes(const struct windrow_solver *solver, const struct wi
         table->residual[to] = fmax(table->residual[to], rim->rounding[c] + excess * most);
     }
     table->least_score = fmin(table->least_score, rim->least_score / scale * (1 - 1e-12));
+}
+
+static double rim_jump_sum(const struct windrow_solver *solver)
+{
+    const struct windrow_web *web = solver->options.web;
+    if (!solver->options.rim_jump)
+        return (double)(web->pages - web->core_pages) / (double)web->pages;
+    double sum = 0;
+    for (uint64_t i = 0; i < web->pages - web->core_pages; i++)
+        sum += solver->options.rim_jump[i];
+    return sum;
 }
 
 /* What was expected and what was found tell how to expect the next time. */
@@ -245,45 +276,62 @@ static void take_caution(struct windrow_solver *solver, const struct windrow_cer
     state->caution_rho = new_caution(state->caution_rho, windrow_solver_expected_rho(solver), certificate->rho);
 }
 
-enum windrow_status windrow_solver_certify(struct windrow_solver *solver, struct windrow_certificate *certificate)
+static bool core_suffices(const struct windrow_certificate *core, double wanted_error, double wanted_rho)
 {
-    const struct windrow_web *web = solver->options.web;
+    return (wanted_error == 0 || core->error_l1 <= wanted_error) && (wanted_rho == 0 || core->rho <= wanted_rho);
+}
+
+enum windrow_status windrow_solver_certify(struct windrow_solver *solver, double wanted_error, double wanted_rho,
+                                           struct windrow_certificate *certificate, bool *complete)
+{
     struct windrow_solver_private *own = solver->own;
     const struct windrow_stream_job rim_job = {.context = solver, .work = rim_block, .barrier = rim_barrier};
     const struct windrow_stream_job core_job = {.context = solver, .work = core_block, .barrier = core_barrier};
-    struct windrow_class_table rim_table, table;
+    struct windrow_class_table table, core_table, rim_table;
     double beta = solver->options.beta;
+    enum windrow_status status;
+    *complete = false;
+
     clear_totals(solver);
-    enum windrow_status status = windrow_streamer_run(own->streamer, WINDROW_BLOCK_RIM, 0, &rim_job);
-    solver->state.carry = (struct windrow_solver_carry){0};
-    if (status)
-        return status;
-    join_workers(solver, &rim_table);
-    double rim_sum = own->total + own->total_error, rim_rounding = own->rounding;
     if ((status = add_core(solver)))
         return status;
-    solver->scale = own->total + own->total_error;
-    if (!(solver->scale > 0) || !isfinite(solver->scale))
-        return windrow_fail(WINDROW_BUG, "the scores do not add up to a positive number");
-    own->jump_excess = ((1 - beta) + beta * (rim_sum / solver->scale)) - (1 - beta) / solver->scale;
-    double rim_jump = (double)(web->pages - web->core_pages) / (double)web->pages;
-    if (solver->options.rim_jump) {
-        rim_jump = 0;
-        for (uint64_t i = 0; i < web->pages - web->core_pages; i++)
-            rim_jump += solver->options.rim_jump[i];
-    }
-
+    double core_sum = own->total + own->total_error, core_scale = (1 - beta) + beta * core_sum;
+    solver->scale = core_scale;
     clear_totals(solver);
     status = windrow_streamer_run(own->streamer, WINDROW_BLOCK_CORE, 0, &core_job);
     solver->state.carry = (struct windrow_solver_carry){0};
     if (status)
         return status;
-    join_workers(solver, &table);
-    add_rim_classes(solver, &rim_table, &table);
-    double rounding = own->rounding + rim_rounding / solver->scale + 16 * unit * rim_jump;
-    double residual = own->total + own->total_error + rim_rounding / solver->scale + (fabs(own->jump_excess) + 16 * unit) * rim_jump * (1 + 1e-9);
-    windrow_certificate_make(certificate, beta, &table, residual, rounding, 16 * unit);
+    double core_residual = own->total + own->total_error, core_rounding = own->rounding;
+    join_workers(solver, &core_table);
     solver->state.certifications++;
+    /* Less than this cannot come out: whether it is enough is seen before the rim is read. */
+    windrow_certificate_make(certificate, beta, &core_table, core_residual, core_rounding, 0);
+    if (!core_suffices(certificate, wanted_error, wanted_rho)) {
+        take_caution(solver, certificate);
+        return WINDROW_OK;
+    }
+
+    clear_totals(solver);
+    status = windrow_streamer_run(own->streamer, WINDROW_BLOCK_RIM, 0, &rim_job);
+    solver->state.carry = (struct windrow_solver_carry){0};
+    if (status)
+        return status;
+    join_workers(solver, &rim_table);
+    double rim_sum = own->total + own->total_error, rim_rounding = own->rounding;
+    solver->scale = core_sum + rim_sum;
+    if (!(solver->scale > 0) || !isfinite(solver->scale))
+        return windrow_fail(WINDROW_BUG, "the scores do not add up to a positive number");
+    double excess = fabs(((1 - beta) + beta * (rim_sum / solver->scale)) - (1 - beta) / solver->scale) + 16 * unit;
+    double slack = fabs(core_scale / solver->scale - 1) * (1 + 1e-9) + 16 * unit;
+    finish_core_classes(&core_table, beta, excess, slack);
+    table = core_table;
+    add_rim_classes(solver, &rim_table, excess, &table);
+    double rim_jump = rim_jump_sum(solver);
+    double rounding = core_rounding * (1 + slack) + rim_rounding / solver->scale + 16 * unit * rim_jump;
+    double residual = core_residual * (1 + slack) + rim_rounding / solver->scale + excess * (1 + 1e-9);
+    windrow_certificate_make(certificate, beta, &table, residual, rounding, 16 * unit);
     take_caution(solver, certificate);
+    *complete = true;
     return WINDROW_OK;
 }

@@ -387,12 +387,15 @@ static bool exhausted(const struct job *job, const struct windrow_certificate *n
     return hopeless ? resting || now->error_l1 < 2 * now->rounding_l1 : resting && now->error_l1 < 100 * now->rounding_l1;
 }
 
-static enum windrow_status certify(struct job *job, struct windrow_certificate *certificate)
+/* With `anyway` scores are made even where the core shows that they will not be good enough. */
+static enum windrow_status certify(struct job *job, struct windrow_certificate *certificate, bool anyway)
 {
+    bool complete;
     windrow_meter_stage(&job->meter, "certifying", "links", job->web.links[WINDROW_BLOCK_CORE] + job->web.links[WINDROW_BLOCK_RIM]);
     job->meter.now.sweep = job->solver->state.sweeps;
     job->meter.now.error_l1 = windrow_solver_expected_error(job->solver);
-    enum windrow_status status = windrow_solver_certify(job->solver, certificate);
+    enum windrow_status status = windrow_solver_certify(job->solver, anyway ? 0 : job->error, anyway || job->digits == 0 ? 0 : pow(10, -job->digits),
+                                                       certificate, &complete);
     windrow_meter_stage_end(&job->meter);
     return status == WINDROW_STOPPED ? stop(job) : status;
 }
@@ -404,7 +407,7 @@ static enum windrow_status solve(struct job *job, struct windrow_certificate *ce
     enum windrow_status status = WINDROW_OK;
     for (;;) {
         if (job->solver->state.next_block == 0 && ready_to_certify(job)) {
-            if ((status = certify(job, certificate)))
+            if ((status = certify(job, certificate, false)))
                 return status;
             job->saved = false;
             *enough = proves(job, certificate);
@@ -413,7 +416,7 @@ static enum windrow_status solve(struct job *job, struct windrow_certificate *ce
             /* A vector that is at rest to the last bit will not change any more. */
             const struct windrow_solver_state *state = &job->solver->state;
             if (exhausted(job, certificate, &before) || state->changes[state->change_count - 1] == 0)
-                return WINDROW_OK;
+                return certify(job, certificate, true);
             before = *certificate;
         }
         if ((status = sweep_once(job)))

@@ -3,9 +3,9 @@
  *
  * With x the values before a sweep, g those after it and f = g - x, the next values are
  * g - sum(gamma_j dG_j), where dF_j and dG_j are the last few differences of f and g between sweeps and
- * gamma minimises the norm of f - sum(gamma_j dF_j). The norm weighs a page's change by 1/score, so that
- * it stands for the sum of absolute errors. The differences of x are known exactly from the mixing itself
- * (dG = dX + dF), so that single precision is enough for the columns.
+ * gamma minimises the sum of squares of f - sum(gamma_j dF_j), taken over scores (other weights, by 1/score
+ * or its square, were tried and needed as many sweeps). The differences of x are known exactly from the
+ * mixing itself (dG = dX + dF), so that single precision is enough for the columns.
  *
  * All sums run over chunks of WINDROW_MIXING_CHUNK pages, added in order: the same bytes for any crew.
  */
@@ -22,6 +22,7 @@ struct windrow_mixing_state {
     uint32_t newest;   /* index of the newest finished one */
     uint32_t pending;  /* 1: the next column holds the last f and dX */
     uint32_t reserved;
+    double gram[WINDROW_MIXING_COLUMNS][WINDROW_MIXING_COLUMNS]; /* dF_i with dF_j, by index */
 };
 
 struct windrow_mixing {

@@ -100,7 +100,8 @@ enum windrow_status windrow_solver_create(const struct windrow_solver_options *o
     }
     made->host_passes = vector_take(&memory, web->host_count);
     made->block_passes = vector_take(&memory, web->block_count[WINDROW_BLOCK_CORE]);
-    made->state.fall = made->state.caution_error = made->state.caution_rho = 1;
+    made->state.fall = made->state.caution_rho = 1;
+    made->state.caution_error = 2; /* between what crawls and small webs turn out to need */
     find_hosts_of_blocks(made);
     if ((status = windrow_streamer_create(web, options->crew, &own->streamer)))
         goto failed;

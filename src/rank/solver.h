@@ -103,9 +103,12 @@ enum windrow_status windrow_solver_sweep(struct windrow_solver *solver);
 double windrow_solver_expected_error(const struct windrow_solver *solver);
 double windrow_solver_expected_rho(const struct windrow_solver *solver);
 
-/* Finishes the dangling pages by a pass over the rim, proves the error by a pass over the core in which
- * nothing changes. The proof is for the scores of windrow_solver_core_score() and ..._rim_score(). */
-enum windrow_status windrow_solver_certify(struct windrow_solver *solver, struct windrow_certificate *certificate);
+/* Proves the error by a pass over the core in which nothing changes, and gives the dangling pages their scores
+ * by a pass over the rim. The proof is for windrow_solver_core_score() and ..._rim_score(). Where the core
+ * shows that `wanted_error` or `wanted_rho` (0: anything will do) cannot be proven, *complete is false:
+ * the rim was left out, there are no scores, and the certificate only tells how far it is off. */
+enum windrow_status windrow_solver_certify(struct windrow_solver *solver, double wanted_error, double wanted_rho,
+                                           struct windrow_certificate *certificate, bool *complete);
 
 /* Scores as they are handed out, after windrow_solver_certify() and before the next sweep. */
 static inline double windrow_solver_core_score(const struct windrow_solver *solver, uint64_t core)

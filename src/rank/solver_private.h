@@ -26,8 +26,7 @@ struct windrow_solver_private {
     uint64_t wave_first;
     uint64_t inner_links_most;            /* near links of a host that may get more passes: larger ones are the sweep itself */
     double worth;                         /* change on a near link that makes another pass inside a host pay */
-    /* Certifying: what all blocks need. */
-    double jump_excess;                   /* c: q = (residual of y)/scale + c v */
+    /* Certifying. */
     double total, total_error, rounding;  /* sums over the blocks so far, compensated */
     uint64_t piece_links;
 };
