@@ -40,6 +40,7 @@ static const char *story(const char *text, size_t bytes, enum windrow_dump_shape
 }
 
 #define PAIRS(text) story(text, sizeof text - 1, WINDROW_DUMP_PAIRS, false)
+#define IDS(text) story(text, sizeof text - 1, WINDROW_DUMP_IDS, false)
 #define LISTS(text) story(text, sizeof text - 1, WINDROW_DUMP_LISTS, false)
 
 static void pairs_are_read(void **state)
@@ -115,7 +116,7 @@ static void junk_is_harmless(void **state)
         size_t bytes = (size_t)random() % sizeof junk;
         for (size_t i = 0; i < bytes; i++)
             junk[i] = random() % 2 ? "\t\n\r \0a"[random() % 6] : (char)random();
-        story(junk, bytes, round % 2 ? WINDROW_DUMP_LISTS : WINDROW_DUMP_PAIRS, round % 3 == 0);
+        story(junk, bytes, (enum windrow_dump_shape)(WINDROW_DUMP_PAIRS + round % 3), round % 4 == 0);
     }
 }
 
@@ -123,6 +124,15 @@ static void byte_order_mark_is_skipped_at_the_beginning_only(void **state)
 {
     (void)state;
     assert_string_equal(PAIRS("\xEF\xBB\xBF" "a\tb\n\xEF\xBB\xBF" "c"), "1>a|b;2>\xEF\xBB\xBF" "c;");
+}
+
+static void ids_are_read_between_any_white_space(void **state)
+{
+    (void)state;
+    assert_string_equal(IDS("1\t2\n1 3\n4\t5 6  7\r\n"), "1>1|2;2>1|3;3>4|5|6|7;");
+    assert_string_equal(IDS("  8 \t 9 \n\n10\n"), "1>8|9;3>10;");
+    /* Whether a field is a number, others say. */
+    assert_string_equal(IDS("-1 x\t2"), "1>-1|x|2;");
 }
 
 static void continued_line_says_so(void **state)
@@ -182,6 +192,7 @@ int main(void)
         cmocka_unit_test(leading_tab_is_an_empty_source),
         cmocka_unit_test(junk_is_harmless),
         cmocka_unit_test(byte_order_mark_is_skipped_at_the_beginning_only),
+        cmocka_unit_test(ids_are_read_between_any_white_space),
         cmocka_unit_test(continued_line_says_so),
         cmocka_unit_test(fields_beyond_the_limit_stay_too_long),
     };

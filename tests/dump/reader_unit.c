@@ -79,7 +79,7 @@ static void story_add(struct windrow_buffer *story, const struct windrow_dump_ch
 static struct windrow_dump_options options_for(size_t path_count, enum windrow_dump_shape shape, size_t chunk_bytes)
 {
     return (struct windrow_dump_options){
-        .paths = names, .path_count = path_count, .shape = shape, .chunk_bytes = chunk_bytes};
+        .paths = names, .path_count = path_count, .shape = shape, .with_ids = true, .chunk_bytes = chunk_bytes};
 }
 
 /* Reads everything; with stop_every > 0 a new reader goes on after so many chunks. */
@@ -146,27 +146,46 @@ static void shape_can_be_forced(void **state)
     check_story(1, WINDROW_DUMP_PAIRS, 0, 0, "\n0:1>?");
 }
 
-static void ids_are_not_supported_yet(void **state)
+static void ids_need_somebody_who_knows_their_names(void **state)
 {
     (void)state;
     struct windrow_dump *dump;
     struct windrow_dump_chunk chunk = {0};
     struct windrow_dump_options options = options_for(1, WINDROW_DUMP_AUTO, 0);
+    options.with_ids = false;
     file_write(0, "1\t2\n", 4);
     assert_int_equal(windrow_dump_open(&options, NULL, &dump), WINDROW_OK);
     assert_int_equal(windrow_dump_read(dump, &chunk), WINDROW_USAGE);
-    assert_non_null(strstr(windrow_message(), "shape ids is not supported yet"));
+    assert_non_null(strstr(windrow_message(), "--names"));
+    assert_non_null(strstr(windrow_message(), paths[0]));
     windrow_dump_close(dump);
     windrow_dump_chunk_free(&chunk);
     options.shape = WINDROW_DUMP_IDS;
     assert_int_equal(windrow_dump_open(&options, NULL, &dump), WINDROW_USAGE);
+    assert_non_null(strstr(windrow_message(), "--names"));
     assert_null(dump);
+    options.with_ids = true;
+    assert_int_equal(windrow_dump_open(&options, NULL, &dump), WINDROW_OK);
+    windrow_dump_close(dump);
+}
+
+static void ids_stand_between_other_shapes(void **state)
+{
+    (void)state;
+    file_write(0, "7\t8 9\n  10\n", 11);
+    file_write(1, "a:\tb:\tc:\n", 9);
+    file_write(2, "18446744073709551615 7\t\n", 24);
+    for (size_t chunk_bytes = 0; chunk_bytes < 40; chunk_bytes++)
+        for (size_t stop_every = 0; stop_every < 4; stop_every++)
+            check_story(3, WINDROW_DUMP_AUTO, chunk_bytes, stop_every, "\n0:1>7|8|9\n0:2>10\n1:1>a:|b:|c:\n2:1>18446744073709551615|7");
 }
 
 /* Random dumps: long and short lines, blank fields, blank lines, missing last newline. */
-static size_t dump_make(char *text, bool lists)
+static size_t dump_make(char *text, enum windrow_dump_shape shape)
 {
     size_t bytes = 0;
+    bool lists = shape != WINDROW_DUMP_PAIRS;
+    const char *letters_of = shape == WINDROW_DUMP_IDS ? "12 \r " : "ab: \r";
     for (long lines = random() % 12; lines > 0; lines--) {
         long fields = lists ? random() % (random() % 4 == 0 ? 40 : 4) : random() % 5;
         for (long field = 0; field < fields; field++) {
@@ -176,7 +195,7 @@ static size_t dump_make(char *text, bool lists)
                 bytes += (size_t)sprintf(text + bytes, "%s", random() % 4 ? "nofollow" : "x:");
             else
                 for (long letters = random() % 6; letters > 0; letters--)
-                    text[bytes++] = "ab: \r"[random() % 5];
+                    text[bytes++] = letters_of[random() % 5];
         }
         if (lines > 1 || random() % 2)
             text[bytes++] = '\n';
@@ -190,10 +209,9 @@ static void chunks_and_stops_do_not_show(void **state)
     srandom(17);
     static char text[8192];
     for (int round = 0; round < 300; round++) {
-        bool lists = round % 2;
-        enum windrow_dump_shape shape = lists ? WINDROW_DUMP_LISTS : WINDROW_DUMP_PAIRS;
+        enum windrow_dump_shape shape = (enum windrow_dump_shape)(WINDROW_DUMP_PAIRS + round % 3);
         for (int file = 0; file < 2; file++)
-            file_write(file, text, dump_make(text, lists));
+            file_write(file, text, dump_make(text, shape));
         size_t largest_bytes;
         struct windrow_buffer whole = story_read(options_for(2, shape, 0), 0, &largest_bytes);
         for (int trial = 0; trial < 6; trial++)
@@ -490,7 +508,8 @@ int main(void)
     const struct CMUnitTest tests[] = {
         cmocka_unit_test(files_come_in_order_with_their_own_shapes),
         cmocka_unit_test(shape_can_be_forced),
-        cmocka_unit_test(ids_are_not_supported_yet),
+        cmocka_unit_test(ids_need_somebody_who_knows_their_names),
+        cmocka_unit_test(ids_stand_between_other_shapes),
         cmocka_unit_test(chunks_and_stops_do_not_show),
         cmocka_unit_test(long_lists_are_split_with_their_source_repeated),
         cmocka_unit_test(position_inside_a_late_line_finds_its_source),

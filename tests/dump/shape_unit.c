@@ -46,6 +46,8 @@ static void numbers_only_make_ids(void **state)
 {
     (void)state;
     assert_int_equal(shape_of("1\t2\n2\t3\r\n\n"), WINDROW_DUMP_IDS);
+    assert_int_equal(shape_of("1 2\n2   3 4\n5\n"), WINDROW_DUMP_IDS);
+    assert_int_equal(shape_of("1 2 x\n"), WINDROW_DUMP_PAIRS);
     assert_int_equal(shape_of("1\t2\na:\t3\n"), WINDROW_DUMP_PAIRS);
     assert_int_equal(shape_of("1\t\t2\n"), WINDROW_DUMP_LISTS);
 }
