@@ -12,6 +12,7 @@
 #include "shard/table.h"
 #include "store/pages.h"
 #include "url/domain.h"
+#include "url/key.h"
 #include "url/normal.h"
 
 #include <errno.h>
@@ -155,25 +156,117 @@ static enum windrow_status load_runs(struct job *job)
     return status;
 }
 
-/* The earlier store becomes the last run. Its record and the higher count of runs are one commit. */
+/* The earlier store becomes the last runs. Its record and the higher count of runs are one commit. */
 static enum windrow_status add_old(struct job *job)
 {
     struct windrow_old_counts counts;
+    struct windrow_buffer run_pages = {0}, names = {0}, records = {0};
     enum windrow_status status = windrow_ledger_get(job->ledger, "old", &counts, sizeof counts);
     if (status != WINDROW_NO)
         return status;
     windrow_meter_stage(&job->meter, "reading the earlier store", "links", 2 * windrow_store_facts(job->old)->links);
-    status = windrow_old_write(job->old, job->scratch, job->reading.run_count, NULL, NULL, job->memory_bytes, &job->meter, &counts);
+    status = windrow_old_write(job->old, job->scratch, job->reading.run_count, &job->fold, job->memory_bytes, &job->meter, &run_pages, &counts);
     windrow_meter_stage_end(&job->meter);
-    if (status || (status = windrow_directory_sync(job->scratch)))
-        return status;
-    char key[32];
-    snprintf(key, sizeof key, "run/%06llu", (unsigned long long)job->reading.run_count++);
-    job->reading.links += counts.links;
-    job->reading.run_pages += counts.pages;
-    struct windrow_ledger_record records[] = {{"old", &counts, sizeof counts}, {key, &counts.pages, sizeof counts.pages},
-                                              {"reading", &job->reading, sizeof job->reading}};
-    return windrow_ledger_commit(job->ledger, records, 3);
+    const uint64_t *pages = (const uint64_t *)run_pages.data;
+    if (!status)
+        status = windrow_directory_sync(job->scratch);
+    if (!status)
+        status = windrow_buffer_reserve(&names, counts.runs * 32);
+    if (!status)
+        status = windrow_buffer_reserve(&records, (counts.runs + 2) * sizeof(struct windrow_ledger_record));
+    if (!status) {
+        struct windrow_ledger_record *record = (struct windrow_ledger_record *)records.data;
+        for (uint64_t run = 0; run < counts.runs; run++) {
+            char *key = (char *)names.data + run * 32;
+            snprintf(key, 32, "run/%06llu", (unsigned long long)job->reading.run_count++);
+            job->reading.run_pages += pages[run];
+            record[run] = (struct windrow_ledger_record){key, &pages[run], sizeof pages[run]};
+        }
+        job->reading.links += counts.links;
+        record[counts.runs] = (struct windrow_ledger_record){"old", &counts, sizeof counts};
+        record[counts.runs + 1] = (struct windrow_ledger_record){"reading", &job->reading, sizeof job->reading};
+        status = windrow_ledger_commit(job->ledger, record, counts.runs + 2);
+    }
+    windrow_buffer_free(&run_pages);
+    windrow_buffer_free(&names);
+    windrow_buffer_free(&records);
+    return status;
+}
+
+struct alias_lines {
+    struct windrow_writer writer;
+    struct windrow_page_reader *to;
+    char *url;
+};
+
+static enum windrow_status write_alias_line(void *context, const uint8_t *key, size_t key_bytes, uint64_t page)
+{
+    struct alias_lines *lines = context;
+    const char *to;
+    size_t to_bytes, from_bytes = windrow_key_url((const char *)key, key_bytes, lines->url, WINDROW_URL_BYTES_MAX);
+    enum windrow_status status = windrow_page_reader_url(lines->to, page, &to, &to_bytes);
+    if (!status)
+        status = windrow_writer_append(&lines->writer, lines->url, from_bytes);
+    if (!status)
+        status = windrow_writer_append(&lines->writer, "\t", 1);
+    if (!status)
+        status = windrow_writer_append(&lines->writer, to, to_bytes);
+    return status ? status : windrow_writer_append(&lines->writer, "\n", 1);
+}
+
+static enum windrow_status copy_lines(const char *path, struct windrow_writer *writer)
+{
+    const char *const paths[] = {path};
+    struct windrow_dump_options options = {.paths = paths, .path_count = 1, .shape = WINDROW_DUMP_LISTS};
+    struct windrow_dump_chunk chunk = {0};
+    struct windrow_dump *dump = NULL;
+    enum windrow_status status = windrow_dump_open(&options, NULL, &dump);
+    while (!status && !(status = windrow_dump_read(dump, &chunk)) && chunk.bytes)
+        status = windrow_writer_append(writer, chunk.text, chunk.bytes);
+    windrow_dump_chunk_free(&chunk);
+    windrow_dump_close(dump);
+    return status;
+}
+
+/* The aliases of the earlier store stay in force; those of --aliases are added to them. Writes both to the file `path`. */
+static enum windrow_status join_aliases(struct job *job, const char *path)
+{
+    struct alias_lines lines = {.writer.descriptor = -1, .url = malloc(WINDROW_URL_BYTES_MAX)};
+    enum windrow_status status = lines.url ? windrow_page_reader_create(job->old, &lines.to) : memory();
+    if (!status)
+        status = windrow_writer_open(&lines.writer, path, false);
+    if (!status)
+        status = windrow_store_each_alias(job->old, write_alias_line, &lines);
+    if (!status && job->options->aliases)
+        status = copy_lines(job->options->aliases, &lines.writer);
+    if (!status)
+        status = windrow_writer_close(&lines.writer);
+    windrow_writer_abandon(&lines.writer);
+    windrow_page_reader_destroy(lines.to);
+    free(lines.url);
+    return status;
+}
+
+static enum windrow_status prepare_tables(struct job *job)
+{
+    struct windrow_shard_options options = *job->options;
+    char *joined = NULL;
+    enum windrow_status status = WINDROW_OK;
+    if (job->old && windrow_store_has_aliases(job->old)) {
+        job->fold.with_aliases = true;
+        joined = windrow_path(job->scratch, "joined-aliases");
+        options.aliases = joined;
+        struct windrow_alias_facts made;
+        status = !joined ? memory() : windrow_ledger_get(job->ledger, "aliases", &made, sizeof made);
+        if (status == WINDROW_NO)
+            status = join_aliases(job, joined);
+    }
+    if (!status)
+        status = windrow_fold_prepare(&job->fold, &options, job->ledger, job->memory_bytes, &job->meter);
+    if (joined && !status)
+        status = windrow_file_remove(joined);
+    free(joined);
+    return status;
 }
 
 static enum windrow_status read_dumps(struct job *job)
@@ -181,7 +274,7 @@ static enum windrow_status read_dumps(struct job *job)
     enum windrow_status status = windrow_ledger_get(job->ledger, "reading", &job->reading, sizeof job->reading);
     if (status == WINDROW_NO)
         status = WINDROW_OK;
-    if (!status && !job->reading.finished) {
+    if (!status && !job->reading.finished && job->options->dump_count) {
         struct windrow_reading reading = {.options = job->options, .fold = &job->fold, .scratch = job->scratch, .log_path = job->log_path,
                                           .ledger = job->ledger, .crew = job->crew, .meter = &job->meter, .memory_bytes = job->memory_bytes};
         windrow_meter_stage(&job->meter, "reading dumps", "URLs", 0);
@@ -529,7 +622,7 @@ static enum windrow_status work(struct job *job)
     enum windrow_status status;
     struct mapped mapped = {.core_map.descriptor = -1, .hosts.descriptor = -1};
     double began = windrow_seconds();
-    if ((status = windrow_fold_prepare(&job->fold, job->options, job->ledger, job->memory_bytes, &job->meter)) || (status = read_dumps(job)))
+    if ((status = prepare_tables(job)) || (status = read_dumps(job)))
         return status;
     if ((status = merge_pages(job)) || (status = write_table(job)) || (status = remap_links(job)))
         return status;
@@ -550,7 +643,7 @@ static enum windrow_status check_options(const struct windrow_shard_options *opt
 {
     if (!options->out || !*options->out)
         return windrow_fail(WINDROW_USAGE, "name the store to make with --out");
-    if (!options->dump_count)
+    if (!options->dump_count && !options->add)
         return windrow_fail(WINDROW_USAGE, "name the dumps to read, or - for standard input");
     if (options->memory_bytes < MEMORY_LEAST)
         return windrow_fail(WINDROW_USAGE, "--memory must be at least %lluM", (unsigned long long)(MEMORY_LEAST >> 20));

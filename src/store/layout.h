@@ -35,6 +35,15 @@ static inline void windrow_layout_block_file(char *name, size_t capacity, enum w
 const struct windrow_manifest *windrow_store_manifest(const struct windrow_store *store);
 /* Opens what the manifest (taken over, left empty) describes, without a seal: for the job that is about to set it. */
 enum windrow_status windrow_store_open_manifest(const char *path, struct windrow_manifest *manifest, struct windrow_store **store);
+/* The index of the page table, or of the table of aliases (frame_count 0: there is none). */
+struct windrow_pages_index;
+const struct windrow_pages_index *windrow_store_pages_index(const struct windrow_store *store);
+const struct windrow_pages_index *windrow_store_alias_index(const struct windrow_store *store);
+/* Calls `each` for every folded URL of the store, in host order, with the page that it was folded into. */
+enum windrow_status windrow_store_each_alias(const struct windrow_store *store,
+                                             enum windrow_status (*each)(void *context, const uint8_t *key, size_t key_bytes, uint64_t page),
+                                             void *context);
+bool windrow_store_has_aliases(const struct windrow_store *store);
 struct windrow_page_reader;
 enum windrow_status windrow_page_reader_key(struct windrow_page_reader *reader, uint64_t page, const uint8_t **key, size_t *key_bytes);
 enum windrow_status windrow_page_reader_find_key(struct windrow_page_reader *reader, const char *key, size_t key_bytes, uint64_t *page);

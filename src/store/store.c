@@ -20,6 +20,10 @@ enum flat { PAGE_INDEX, PAGE_KEYS, HOSTS, HOST_NAMES, CORE_MAP, DEGREES, INSIDE_
 static const char *const flat_names[FLAT_COUNT] = {"page-index", "page-keys", "hosts", "host-names", "core-map", "degrees", "inside-degrees",
                                                    "alias-index", "alias-keys"};
 
+/* No block is nearly as large; a manifest that claims it lies, and would have us allocate for it. */
+#define BLOCK_BYTES_MOST (UINT32_C(64) << 20)
+#define BLOCK_LINKS_MOST (UINT64_C(1) << 22)
+
 struct windrow_store {
     char *path;
     struct windrow_manifest manifest;
@@ -63,7 +67,8 @@ static enum windrow_status check_sizes(struct windrow_store *store)
     const struct windrow_store_facts *facts = &store->manifest.facts;
     const struct windrow_map *flats = store->flats;
     uint64_t groups = facts->pages / WINDROW_CORE_GROUP_PAGES + 1;
-    bool good = facts->core_pages + facts->dangling_pages == facts->pages && facts->pages < (UINT64_C(1) << 40) &&
+    bool good = facts->pages < (UINT64_C(1) << 40) && facts->core_pages <= facts->pages && facts->hosts <= facts->pages &&
+                facts->core_pages + facts->dangling_pages == facts->pages &&
                 flats[HOSTS].bytes == (facts->hosts + 1) * sizeof(struct windrow_host_record) &&
                 flats[CORE_MAP].bytes == groups * sizeof(struct windrow_core_group) && flats[DEGREES].bytes == 4 * facts->core_pages &&
                 flats[INSIDE_DEGREES].bytes == 4 * facts->core_pages;
@@ -71,6 +76,7 @@ static enum windrow_status check_sizes(struct windrow_store *store)
         store->hosts = (const struct windrow_host_record *)flats[HOSTS].data;
         store->core_groups = (const struct windrow_core_group *)flats[CORE_MAP].data;
         store->core_group_count = groups;
+        good = store->hosts[0].first_page == 0 && store->hosts[0].first_core == 0 && store->hosts[0].name_at == 0;
         for (uint64_t host = 0; good && host < facts->hosts; host++) {
             const struct windrow_host_record *record = &store->hosts[host];
             good = record[0].first_page < record[1].first_page && record[0].first_core <= record[1].first_core &&
@@ -84,7 +90,8 @@ static enum windrow_status check_sizes(struct windrow_store *store)
         bool open_piece = false;
         for (uint64_t block = 0; good && block < store->manifest.block_counts[kind]; block++) {
             const struct windrow_block_record *record = &store->manifest.blocks[kind][block];
-            good = record->first_target == next - open_piece && record->target_count >= 1 && record->frame_bytes && record->payload_bytes;
+            good = record->first_target == next - open_piece && record->target_count >= 1 && record->frame_bytes && record->payload_bytes &&
+                   record->frame_bytes <= BLOCK_BYTES_MOST && record->payload_bytes <= BLOCK_BYTES_MOST && record->link_count <= BLOCK_LINKS_MOST;
             if (record->flags & WINDROW_BLOCK_PIECE) {
                 good = good && record->target_count == 1;
                 open_piece = !(record->flags & WINDROW_BLOCK_LAST_PIECE);
@@ -139,8 +146,10 @@ enum windrow_status windrow_store_open_manifest(const char *path, struct windrow
     if ((status = windrow_pages_index_open(&store->flats[PAGE_INDEX], &store->flats[PAGE_KEYS], store->manifest.facts.pages, &store->pages)))
         goto out;
     if (store->flats[ALIAS_INDEX].bytes) {
-        const struct windrow_pages_mark *last = (const struct windrow_pages_mark *)(store->flats[ALIAS_INDEX].data + store->flats[ALIAS_INDEX].bytes) - 1;
-        status = windrow_pages_index_open(&store->flats[ALIAS_INDEX], &store->flats[ALIAS_KEYS], last->first_entry, &store->aliases);
+        /* Nothing else tells how many aliases there are: the last mark does. */
+        uint64_t marks = store->flats[ALIAS_INDEX].bytes / sizeof(struct windrow_pages_mark);
+        uint64_t entries = marks ? ((const struct windrow_pages_mark *)store->flats[ALIAS_INDEX].data)[marks - 1].first_entry : 0;
+        status = windrow_pages_index_open(&store->flats[ALIAS_INDEX], &store->flats[ALIAS_KEYS], entries, &store->aliases);
     }
 out:
     if (status) {
@@ -500,4 +509,47 @@ enum windrow_status windrow_page_reader_find(struct windrow_page_reader *reader,
 const struct windrow_manifest *windrow_store_manifest(const struct windrow_store *store)
 {
     return &store->manifest;
+}
+
+const struct windrow_pages_index *windrow_store_pages_index(const struct windrow_store *store)
+{
+    return &store->pages;
+}
+
+const struct windrow_pages_index *windrow_store_alias_index(const struct windrow_store *store)
+{
+    return &store->aliases;
+}
+
+bool windrow_store_has_aliases(const struct windrow_store *store)
+{
+    return store->aliases.frame_count > 0;
+}
+
+enum windrow_status windrow_store_each_alias(const struct windrow_store *store,
+                                             enum windrow_status (*each)(void *context, const uint8_t *key, size_t key_bytes, uint64_t page),
+                                             void *context)
+{
+    if (!store->aliases.frame_count)
+        return WINDROW_OK;
+    struct windrow_pages_frame frame = {0};
+    char *path = windrow_path(store->path, "aliases.zst");
+    int descriptor = path ? windrow_files.open(path, O_RDONLY, 0) : -1;
+    enum windrow_status status = !path           ? memory()
+                                 : descriptor < 0 ? windrow_fail_system(WINDROW_DAMAGED, errno, "cannot open %s", path)
+                                                  : WINDROW_OK;
+    for (uint64_t number = 0; !status && number < store->aliases.frame_count; number++) {
+        status = windrow_pages_frame_read(&store->aliases, number, descriptor, path, true, &frame);
+        for (uint32_t at = 0; !status && at < frame.key_count; at++) {
+            if (frame.numbers[at] >= store->manifest.facts.pages)
+                status = windrow_fail(WINDROW_DAMAGED, "the alias table names a page that does not exist; shard the dumps again");
+            else
+                status = each(context, frame.keys.data + frame.key_at[at], frame.key_at[at + 1] - frame.key_at[at], frame.numbers[at]);
+        }
+    }
+    if (descriptor >= 0)
+        windrow_files.close(descriptor);
+    windrow_pages_frame_free(&frame);
+    free(path);
+    return status;
 }
