@@ -162,7 +162,6 @@ struct windrow_plan {
     struct windrow_interval run_bytes;     /* what a run leaves beside the store */
     struct windrow_interval vector_bytes;  /* memory of the vectors while ranking */
     bool vectors_fit;                      /* all of them in memory_bytes, at the high end */
-    uint64_t tiles;                        /* stripes that the vectors would be cut into at the high end: 1 when they fit */
     struct windrow_interval shard_seconds, sweep_seconds, rank_seconds; /* ranking to error_l1 1e-9 */
 };
 

@@ -13,6 +13,7 @@
 #include <stdio.h>
 
 /* The commands: each parses its own arguments, with argv[0] as "windrow COMMAND". */
+enum windrow_status plan_command(int argc, char **argv);
 enum windrow_status shard_command(int argc, char **argv);
 enum windrow_status rank_command(int argc, char **argv);
 enum windrow_status status_command(int argc, char **argv);

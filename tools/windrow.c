@@ -11,6 +11,7 @@ struct command {
 };
 
 static const struct command commands[] = {
+    {"plan", plan_command, "what a full job on some dumps will take"},
     {"shard", shard_command, "raw link dumps to a store"},
     {"rank", rank_command, "a store to scores with a proven error"},
     {"status", status_command, "how far a job is"},
