@@ -344,9 +344,14 @@ enum windrow_status windrow_manifest_read(const char *path, struct windrow_manif
     MDB_txn *transaction = NULL;
     MDB_cursor *cursor = NULL;
     MDB_dbi database;
+    XXH3_state_t *fingerprint = XXH3_createState();
     char *directory = windrow_path(path, "manifest");
-    if (!directory)
+    if (!directory || !fingerprint) {
+        free(directory);
+        XXH3_freeState(fingerprint);
         return memory();
+    }
+    XXH3_64bits_reset(fingerprint);
     int code = mdb_env_create(&environment);
     if (!code)
         code = mdb_env_set_mapsize(environment, MAP_BYTES);
@@ -376,18 +381,23 @@ enum windrow_status windrow_manifest_read(const char *path, struct windrow_manif
             status = windrow_fail(WINDROW_DAMAGED, "the manifest record %s in %s is damaged; shard the dumps again", key, path);
             break;
         }
+        XXH3_64bits_update(fingerprint, key, lmdb_key.mv_size + 1);
+        XXH3_64bits_update(fingerprint, value, lmdb_value.mv_size);
         status = take(manifest, key, value, bytes);
     }
     if (!status && code != MDB_NOTFOUND)
         status = lmdb_failure(code, path, false);
     if (!status && (!manifest->domain_library || !manifest->idn_library || !manifest->zstd_library))
         status = windrow_fail(WINDROW_DAMAGED, "the manifest in %s lacks records; shard the dumps again", path);
+    if (!status && XXH3_64bits_digest(fingerprint) != manifest->facts.fingerprint)
+        status = windrow_fail(WINDROW_DAMAGED, "the records of the manifest in %s do not have the fingerprint of its seal; shard the dumps again", path);
     if (cursor)
         mdb_cursor_close(cursor);
     if (transaction)
         mdb_txn_abort(transaction);
     if (environment)
         mdb_env_close(environment);
+    XXH3_freeState(fingerprint);
     free(directory);
     if (status)
         windrow_manifest_free(manifest);

@@ -124,7 +124,8 @@ enum windrow_status windrow_pages_index_open(const struct windrow_map *marks, co
     uint64_t count = marks->bytes / sizeof(struct windrow_pages_mark);
     *index = (struct windrow_pages_index){(const struct windrow_pages_mark *)marks->data, count - 1, keys->data, keys->bytes};
     bool good = count >= 1 && marks->bytes == count * sizeof(struct windrow_pages_mark) && index->marks[count - 1].first_entry == entries &&
-                index->marks[count - 1].key_at == keys->bytes && (entries == 0) == (count == 1) && (count == 1 || index->marks[0].first_entry == 0);
+                index->marks[count - 1].key_at == keys->bytes && (entries == 0) == (count == 1) && index->marks[0].first_entry == 0 &&
+                index->marks[0].key_at == 0;
     for (uint64_t frame = 0; good && frame + 1 < count; frame++) {
         const struct windrow_pages_mark *mark = &index->marks[frame];
         good = mark[1].first_entry > mark[0].first_entry && mark[1].first_entry - mark[0].first_entry <= WINDROW_PAGES_FRAME_KEYS &&
@@ -233,7 +234,8 @@ enum windrow_status windrow_pages_frame_read(const struct windrow_pages_index *i
         uint64_t shared = 0, length = 0, number = 0;
         shared_at = windrow_varint_get(shared_at, shared_end, &shared);
         length_at = windrow_varint_get(length_at, length_end, &length);
-        if (!shared_at || !length_at || shared > before_bytes || length > (uint64_t)(rest_end - rest_at) || shared + length > WINDROW_KEY_BYTES_MAX)
+        if (!shared_at || !length_at || shared > before_bytes || length > (uint64_t)(rest_end - rest_at) || shared + length > WINDROW_KEY_BYTES_MAX ||
+            shared + length == 0 || out->keys.bytes + shared + length > WINDROW_PAGES_FRAME_BYTES)
             return damaged(path, mark->file_offset);
         if (with_numbers) {
             number_at = windrow_varint_get(number_at, end, &number);
@@ -248,8 +250,6 @@ enum windrow_status windrow_pages_frame_read(const struct windrow_pages_index *i
         memcpy(out->keys.data + here + shared, rest_at, (size_t)length);
         rest_at += length;
         out->keys.bytes += (size_t)(shared + length);
-        if (out->keys.bytes > UINT32_MAX)
-            return damaged(path, mark->file_offset);
         if (key && windrow_key_compare((char *)out->keys.data + before, before_bytes, (char *)out->keys.data + here, (size_t)(shared + length)) >= 0)
             return damaged(path, mark->file_offset);
         out->key_at[key] = (uint32_t)here;

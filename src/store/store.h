@@ -84,8 +84,36 @@ enum windrow_status windrow_page_reader_url(struct windrow_page_reader *reader, 
 enum windrow_status windrow_page_reader_find(struct windrow_page_reader *reader, const char *url, size_t url_bytes,
                                              uint64_t *page, bool *folded);
 
-/* Reads everything back: every frame, block, flat file and count. Calls `found` with one line for each
- * damage; WINDROW_NO when there was any. */
+/* What the parts of a store take, by file size. Times 8 over the links: bits a link. */
+struct windrow_store_sizes {
+    uint64_t page_bytes;        /* frames of the page table */
+    uint64_t page_index_bytes;  /* the page table's index and first keys */
+    uint64_t host_bytes;        /* host table and names */
+    uint64_t core_map_bytes;
+    uint64_t core_link_bytes;   /* blocks of core pages */
+    uint64_t rim_link_bytes;    /* blocks of dangling pages */
+    uint64_t degree_bytes;      /* out-degrees and inside degrees */
+    uint64_t alias_bytes;       /* table of folded URLs, 0 when there is none */
+    uint64_t manifest_bytes;    /* with its seal */
+    uint64_t all_bytes;         /* the sum of the above */
+};
+
+/* WINDROW_DAMAGED when a file of the manifest cannot be looked at. */
+enum windrow_status windrow_store_sizes(const struct windrow_store *store, struct windrow_store_sizes *sizes);
+
+/* Reads a store back: seal and manifest; bytes and checksum of every file, and that there is no other where pages and links
+ * live; every frame of the page table, its keys and their order; hosts, core map and counts against the keys; every
+ * block, and both kinds of degrees recounted from them; the table of aliases. Goes on after damage as far as what is left
+ * can be made sense of.
+ *
+ * threads   at least 1; takes 8 bytes of memory a core page, and some MiB a thread
+ * found     is called from the calling thread, with one line for each damage that names file and place; the same lines
+ *           in the same order for any number of threads. Of very many, some of the last are counted only.
+ * watch     may be NULL; the stage is "verifying"
+ *
+ * WINDROW_NO: there was damage, or (without a call of `found`) the store is not finished; WINDROW_USAGE: there is no store;
+ * WINDROW_RESOURCE; WINDROW_STOPPED.
+ */
 enum windrow_status windrow_store_verify(const char *path, unsigned threads, void (*found)(void *context, const char *damage),
                                          void *context, const struct windrow_watch *watch);
 
