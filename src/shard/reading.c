@@ -24,6 +24,8 @@ struct worker {
     uint64_t sample_count;
     uint64_t lines, fields, bad_fields;
     uint64_t dropped[WINDROW_DROP_COUNT];
+    bool writes;                 /* its batch is to be written, as run number `run` */
+    uint64_t run;
     struct windrow_batch_counts written;
     struct reader *reader;
 };
@@ -263,19 +265,24 @@ static enum windrow_status sample_unnamed(void *context, uint64_t file, uint64_t
     return sample(worker->reader, worker, line, file, text, (size_t)bytes, "id without a name");
 }
 
+/* Says which run a worker is to write. Before any is written: writing empties batches, in whatever order. */
+static void number_run(struct reader *reader, unsigned index)
+{
+    struct worker *worker = &reader->workers[index];
+    worker->run = index ? reader->workers[index - 1].run + reader->workers[index - 1].writes : reader->state->run_count;
+    worker->writes = !windrow_batch_empty(worker->batch);
+}
+
 static enum windrow_status write(void *context, uint64_t task, unsigned crew_worker)
 {
     (void)crew_worker;
     struct reader *reader = context;
     struct worker *worker = &reader->workers[task];
-    uint64_t run = reader->state->run_count;
-    for (uint64_t before = 0; before < task; before++)
-        run += !windrow_batch_empty(reader->workers[before].batch);
     worker->written = (struct windrow_batch_counts){0};
-    if (windrow_batch_empty(worker->batch))
+    if (!worker->writes)
         return WINDROW_OK;
-    char *key_path = windrow_path(reader->reading->scratch, "batch-%06llu.keys", (unsigned long long)run);
-    char *link_path = windrow_path(reader->reading->scratch, "batch-%06llu.links", (unsigned long long)run);
+    char *key_path = windrow_path(reader->reading->scratch, "batch-%06llu.keys", (unsigned long long)worker->run);
+    char *link_path = windrow_path(reader->reading->scratch, "batch-%06llu.links", (unsigned long long)worker->run);
     enum windrow_status status = WINDROW_OK;
     if (!key_path || !link_path)
         status = windrow_fail(WINDROW_RESOURCE, "out of memory for a path");
@@ -306,7 +313,7 @@ static enum windrow_status write_log(struct reader *reader, unsigned workers)
 }
 
 /* The batches are written; the ledger learns of them in one transaction. */
-static enum windrow_status commit(struct reader *reader, unsigned workers, const bool *wrote)
+static enum windrow_status commit(struct reader *reader, unsigned workers)
 {
     struct windrow_reading_state *state = reader->state;
     struct windrow_ledger_record *records = calloc(workers + 1, sizeof *records);
@@ -328,7 +335,7 @@ static enum windrow_status commit(struct reader *reader, unsigned workers, const
         state->links += worker->written.links;
         worker->lines = worker->fields = worker->bad_fields = 0;
         memset(worker->dropped, 0, sizeof worker->dropped);
-        if (!wrote[index])
+        if (!worker->writes)
             continue;
         state->run_pages += worker->written.pages;
         snprintf(names[count], sizeof *names, "run/%06llu", (unsigned long long)state->run_count++);
@@ -349,9 +356,6 @@ static enum windrow_status commit(struct reader *reader, unsigned workers, const
 static enum windrow_status read_all(struct reader *reader, unsigned workers)
 {
     enum windrow_status status;
-    bool *wrote = calloc(workers, sizeof *wrote);
-    if (!wrote)
-        return windrow_fail(WINDROW_RESOURCE, "out of memory for the batches");
     for (;;) {
         reader->write_now = false;
         reader->batch_began = windrow_seconds();
@@ -361,7 +365,7 @@ static enum windrow_status read_all(struct reader *reader, unsigned workers)
         if (status)
             break;
         for (unsigned index = 0; index < workers; index++)
-            wrote[index] = !windrow_batch_empty(reader->workers[index].batch);
+            number_run(reader, index);
         if ((status = windrow_crew_run(reader->reading->crew, workers, write, reader)))
             break;
         for (unsigned index = 0; index < workers; index++)
@@ -370,7 +374,7 @@ static enum windrow_status read_all(struct reader *reader, unsigned workers)
             write_log(reader, workers);
             break;
         }
-        if ((status = commit(reader, workers, wrote)))
+        if ((status = commit(reader, workers)))
             break;
         if (reader->ended)
             break;
@@ -379,7 +383,6 @@ static enum windrow_status read_all(struct reader *reader, unsigned workers)
             break;
         }
     }
-    free(wrote);
     return status;
 }
 
