@@ -4,16 +4,22 @@
 
 #include <string.h>
 
-enum { MEMORY = OPTION_FIRST, THREADS, TEMPORARY, SHAPE, NOFOLLOW, ALIASES, BAD_MAX, OUT, QUIET };
+enum { MEMORY = OPTION_FIRST, THREADS, TEMPORARY, SHAPE, NAMES, NOFOLLOW, ALIASES, ADD, DROP, SUGGEST, BAD_MAX, OUT, QUIET };
+
+static const char *suggest_path; /* where alias candidates go; NULL: they are only counted */
 
 static const struct argp_option options[] = {
     {"out", OUT, "STORE", 0, "The store's directory, made when missing", 0},
     {"memory", MEMORY, "SIZE", 0, "Most memory to take", 0},
     {"threads", THREADS, "N", 0, "Threads (default: as many as processors)", 0},
     {"tmp", TEMPORARY, "DIRECTORY", 0, "Where scratch files go (default: into the store)", 0},
-    {"shape", SHAPE, "pairs|lists", 0, "Shape of the dumps' lines (default: recognised from the first 1,000)", 0},
+    {"shape", SHAPE, "pairs|lists|ids", 0, "Shape of the dumps' lines (default: recognised from the first 1,000)", 0},
+    {"names", NAMES, "FILE", 0, "For dumps of ids: lines of ID TAB URL or host name", 0},
     {"nofollow", NOFOLLOW, "skip|keep", 0, "What to do with nofollow links (default: skip)", 0},
     {"aliases", ALIASES, "FILE", 0, "Lines of FROM TAB TO: links to FROM count for TO", 0},
+    {"add", ADD, "STORE", 0, "Grow this earlier store: its pages stay, but for those that the dumps fetched again", 0},
+    {"drop", DROP, "FILE", 0, "URLs and hosts to leave out, one a line", 0},
+    {"suggest-aliases", SUGGEST, "FILE", 0, "Write pages that differ only by scheme, www or a slash, as candidates for --aliases", 0},
     {"bad-max", BAD_MAX, "SHARE", 0, "Largest share of malformed URLs that is borne (default: 0.1)", 0},
     {"quiet", QUIET, NULL, 0, "No progress, no summary", 0},
     {0},
@@ -28,14 +34,20 @@ static error_t parse_option(int key, char *argument, struct argp_state *state)
     case THREADS: shard->threads = (unsigned)count_value(argument, "threads", 1024, state); return 0;
     case TEMPORARY: shard->temporary = argument; return 0;
     case ALIASES: shard->aliases = argument; return 0;
+    case NAMES: shard->names = argument; return 0;
+    case ADD: shard->add = argument; return 0;
+    case DROP: shard->drop = argument; return 0;
+    case SUGGEST: suggest_path = argument; return 0;
     case QUIET: command_quiet = true; return 0;
     case SHAPE:
         if (!strcmp(argument, "pairs"))
             shard->shape = WINDROW_SHAPE_PAIRS;
         else if (!strcmp(argument, "lists"))
             shard->shape = WINDROW_SHAPE_LISTS;
+        else if (!strcmp(argument, "ids"))
+            shard->shape = WINDROW_SHAPE_IDS;
         else
-            usage_error(state, "--shape=%s: pairs or lists", argument);
+            usage_error(state, "--shape=%s: pairs, lists or ids", argument);
         return 0;
     case NOFOLLOW:
         shard->keep_nofollow = !strcmp(argument, "keep");
@@ -51,10 +63,9 @@ static error_t parse_option(int key, char *argument, struct argp_state *state)
         shard->dumps = (const char *const *)&state->argv[state->next];
         shard->dump_count = (size_t)(state->argc - state->next);
         return 0;
-    case ARGP_KEY_NO_ARGS:
-        usage_error(state, "a dump is missing (- is standard input)");
-        return 0;
     case ARGP_KEY_END:
+        if (!shard->dump_count && !shard->add)
+            usage_error(state, "a dump is missing (- is standard input)");
         if (!shard->out)
             usage_error(state, "--out STORE is missing");
         return 0;
@@ -79,6 +90,19 @@ static void summarise(const char *store, bool already_done)
     talk("shard", "links dropped: %s", used ? line : "none");
 }
 
+/* Counts the pages that may be one, and names them in a file on request. */
+static enum windrow_status suggest(const struct windrow_shard_options *shard)
+{
+    struct windrow_variant_counts counts;
+    enum windrow_status status = windrow_suggest_aliases(shard->out, shard->memory_bytes, suggest_path, &counts, &shard->watch);
+    progress_end();
+    if (!status)
+        talk("shard", "%s pages differ from another only by scheme (%s), www (%s), a slash (%s) or several of these (%s)%s%s", grouped(counts.pages),
+             grouped(counts.by_scheme), grouped(counts.by_www), grouped(counts.by_slash), grouped(counts.by_several),
+             suggest_path ? ": see " : "; --suggest-aliases FILE names them", suggest_path ? suggest_path : "");
+    return status;
+}
+
 enum windrow_status shard_command(int argc, char **argv)
 {
     static const struct argp parser = {
@@ -93,7 +117,10 @@ enum windrow_status shard_command(int argc, char **argv)
     progress_begin("shard", &shard.watch);
     enum windrow_status status = windrow_shard(&shard, &already_done);
     progress_end();
-    if (!status)
+    if (!status) {
         summarise(shard.out, already_done);
+        if (!already_done || suggest_path)
+            status = suggest(&shard);
+    }
     return finish("shard", status);
 }
