@@ -34,7 +34,7 @@ $(BUILD)/%.o: %.c
 	@echo '  $@' && $(CC) $(ALL_CFLAGS) -c -o $@ $<
 
 $(BUILD)/tests/%_unit: $(BUILD)/tests/%_unit.o $(BUILD)/tests/libcommon.a $(BUILD)/libwindrow.a
-	@echo '  $@' && $(CC) $(ALL_CFLAGS) -o $@ $^ -lcmocka $(LIBRARIES)
+	@echo '  $@' && $(CC) $(ALL_CFLAGS) -o $@ $(filter %.o,$^) $(filter %.a,$^) -lcmocka $(LIBRARIES)
 
 include tests/tests.mk
 
