@@ -24,7 +24,7 @@ struct windrow_census_options {
 
 struct windrow_census {
     uint64_t bytes, lines, fields;  /* read */
-    uint64_t places;
+    uint32_t places;
     double unevenness;              /* standard error of the fields in all, as a share, for what was read in places */
     struct windrow_sample pages;    /* group: what variants share; aspects: all three; note[0]: features (shard/variants.h) */
     struct windrow_sample hosts;

@@ -8,6 +8,7 @@
 #include <stdlib.h>
 #include <string.h>
 #include <unistd.h>
+#include <xxhash.h>
 
 /* A line that begins in a window is read to its end, but not further than this. */
 #define LINE_BYTES_MAX (UINT64_C(8) << 20)
@@ -34,8 +35,10 @@ struct windrow_places {
     size_t file;
 
     /* places */
-    uint64_t window_count;
+    uint64_t window_count;       /* of all files */
     uint64_t next_window;
+    uint64_t wanted_count;
+    uint64_t taken_count;
     uint64_t file_begin;         /* where the file begins, all put one behind another */
     int descriptor;
     enum windrow_dump_shape file_shape;
@@ -120,9 +123,10 @@ enum windrow_status windrow_places_open(const char *const *dumps, size_t dump_co
         places->basis = full || (all_plain && places->total_bytes <= budget_bytes) ? WINDROW_PLAN_WHOLE
                         : all_plain                                                ? WINDROW_PLAN_PLACES
                                                                                    : WINDROW_PLAN_PREFIX;
-        places->window_count = budget_bytes / WINDROW_PLACES_WINDOW_BYTES;
-        if (places->window_count < 2)
-            places->window_count = 2;
+        places->window_count = (places->total_bytes + WINDROW_PLACES_WINDOW_BYTES - 1) / WINDROW_PLACES_WINDOW_BYTES;
+        places->wanted_count = budget_bytes / WINDROW_PLACES_WINDOW_BYTES;
+        if (places->wanted_count < 2)
+            places->wanted_count = 2;
         if (places->basis == WINDROW_PLAN_WHOLE)
             status = open_dumps(places, dumps, dump_count);
     }
@@ -277,8 +281,13 @@ static enum windrow_status read_places(struct windrow_places *places, struct win
     enum windrow_status status = WINDROW_OK;
     chunk->bytes = 0;
     while (!status && !chunk->bytes && places->next_window < places->window_count) {
-        uint64_t last = places->total_bytes > WINDROW_PLACES_WINDOW_BYTES ? places->total_bytes - WINDROW_PLACES_WINDOW_BYTES : 0;
-        uint64_t at = (uint64_t)((double)last * (double)places->next_window / (double)(places->window_count - 1));
+        /* As many as are still wanted out of those that are left: every choice of windows is equally likely (selection
+         * sampling, Fan, Muller & Rezucha 1962). */
+        uint64_t left = places->window_count - places->next_window, window = places->next_window++;
+        double chance = (double)(XXH3_64bits(&window, sizeof window) >> 11) * 0x1p-53;
+        if (chance * (double)left >= (double)(places->wanted_count - places->taken_count))
+            continue;
+        uint64_t at = window * WINDROW_PLACES_WINDOW_BYTES;
         while (at >= places->file_begin + places->file_bytes[places->file] && places->file + 1 < places->dump_count) {
             places->file_begin += places->file_bytes[places->file++];
             if (places->descriptor >= 0)
@@ -288,7 +297,7 @@ static enum windrow_status read_places(struct windrow_places *places, struct win
         if (places->descriptor < 0 && (status = open_window_file(places)))
             break;
         status = read_window(places, chunk, at - places->file_begin);
-        places->next_window++;
+        places->taken_count++;
         places->place++; /* a window in which no line begins is a place too: one without anything new */
     }
     places->read_bytes += chunk->bytes;
@@ -337,7 +346,7 @@ double windrow_places_share(const struct windrow_places *places)
 {
     double share = 1;
     if (places->basis == WINDROW_PLAN_PLACES)
-        share = (double)places->next_window * WINDROW_PLACES_WINDOW_BYTES / (double)places->total_bytes;
+        share = (double)places->taken_count / (double)places->window_count;
     else if (places->basis == WINDROW_PLAN_PREFIX)
         share = places->total_bytes ? (double)consumed_bytes(places) / (double)places->total_bytes : 1;
     return share > 1 ? 1 : share;

@@ -1,9 +1,10 @@
-/* places: dumps read in part, as chunks of whole lines from places spread over them.
+/* places: dumps read in part, as chunks of whole lines from places all over them.
  *
  * What can be read in part depends on the files:
  *   whole    everything, when asked for, or when it is no more than the budget
- *   places   plain files: windows at even distances over all files together; of each the lines that begin in it, so that
- *            every line has the same chance, however long it is
+ *   places   plain files: windows chosen at random (and always the same ones) from all files together; of each the lines that
+ *            begin in it, so that every line has the same chance, however long it is. Not at even distances: then a long
+ *            stretch of one page's lines would never be met twice, and would pass for many pages
  *   prefix   when any file is compressed: the beginnings of all files, as much of each as its share of all bytes on disk. What
  *            it says of the rest is a guess
  * A pipe has no length: it can only be read whole, when asked for.

@@ -31,12 +31,13 @@ static const struct windrow_interval scratch_ratio = {1.1, 1.5, 1.8}, disk_ratio
 #define USUAL_NAME_BYTES 26.0
 #define USUAL_HOST_PAGES 20.0
 
-/* Links take more bits in a larger crawl: from windows of a sixty-fourth, a sixteenth and a quarter of the 20 M crawl 4.5, 4.8, 5.2 bits,
+/* Links take more bits in a larger crawl: from places of a sixty-fourth, a sixteenth and a quarter of the 20 M crawl 4.5, 4.8, 5.2 bits,
  * of all of it 5.2. Where few hosts are most of the crawl, they take fewer, since lists become complete: from a sixteenth of the real
- * webs 1.0 to 4.2 times the bits of the whole. Page names share more when there are more: 6.4, 5.9, 5.4 and 5.1 bytes. */
+ * webs 1.0 to 6.3 times the bits of the whole. Page names share more when there are more: 6.4, 5.9, 5.4 and 5.1 bytes. */
 #define LINK_BITS_DOUBLING 0.12
 #define LINK_BITS_DOUBLING_MOST 0.3
-#define LINK_BITS_LEAST_SHARE 0.15
+#define LINK_BITS_LEAST_POWER 0.7
+#define LINK_BITS_LEAST_SHARE 0.1
 #define PAGE_BYTES_DOUBLING 0.035
 #define PAGE_BYTES_DOUBLING_MOST 0.08
 
@@ -110,32 +111,29 @@ static struct windrow_interval rest_share(struct windrow_interval part, struct w
 
 /* ---- Counts ---- */
 
-/* What a part of the dumps says of the whole: the counts' bounds, and then how uneven the parts were. */
-static struct windrow_interval whole_of(const struct windrow_plan *plan, const struct windrow_census *census, struct windrow_interval interval,
-                                        double least)
+/* Beginnings say less; and what was seen is there. */
+static struct windrow_interval guarded(const struct windrow_plan *plan, struct windrow_interval interval, double least)
 {
-    if (plan->basis == WINDROW_PLAN_PLACES) {
-        double unsure = 0.01 + 2 * census->unevenness;
-        interval = widened(interval, fmax(1 - unsure, 0), 1 + unsure);
-    } else if (plan->basis == WINDROW_PLAN_PREFIX && plan->share < 1) {
+    if (plan->basis == WINDROW_PLAN_PREFIX && plan->share < 1)
         interval = widened(interval, PREFIX_LEAST, PREFIX_MOST);
-    }
     if (interval.low < least && plan->share < 1)
-        interval.low = least; /* what was seen is there */
+        interval.low = least;
     return interval;
 }
 
-static struct windrow_interval counted(const struct windrow_plan *plan, const struct windrow_census *census, const struct windrow_sample *sample,
-                                       enum windrow_sample_aspect aspect)
+static enum windrow_status count(const struct windrow_plan *plan, const struct windrow_census *census, const struct windrow_sample *sample,
+                                 enum windrow_sample_aspect aspect, struct windrow_interval *interval)
 {
     double seen = sample->halvings ? 0 : windrow_sample_count(sample, aspect);
-    return whole_of(plan, census, windrow_sample_estimate(sample, aspect, census->places, plan->share), seen);
+    enum windrow_status status = windrow_sample_estimate(sample, aspect, census->places, plan->share, interval);
+    *interval = guarded(plan, *interval, seen);
+    return status;
 }
 
 static struct windrow_interval read_share(const struct windrow_plan *plan, const struct windrow_census *census, uint64_t read)
 {
-    double whole = (double)read / plan->share;
-    return whole_of(plan, census, (struct windrow_interval){whole, whole, whole}, (double)read);
+    double whole = (double)read / plan->share, unsure = 2 * census->unevenness * (plan->share < 1);
+    return guarded(plan, (struct windrow_interval){whole * fmax(1 - unsure, 0), whole, whole * (1 + unsure)}, (double)read);
 }
 
 /* Which share of the links ends at a core page: from the links whose target is in the page sample. A target whose own line was not read
@@ -149,8 +147,10 @@ static struct windrow_interval core_link_share(const struct windrow_census *cens
         known += target != NULL;
         core += target && target->places[WINDROW_SAMPLE_LINKING];
     }
-    double low = known ? (double)core / (double)known : 1, high = fmin(low / share, 1);
-    return (struct windrow_interval){low, sqrt(low * high), high};
+    if (!known)
+        return (struct windrow_interval){0, 1, 1};
+    double part = (double)core / (double)known, spread = 3 * sqrt(part * (1 - part) / (double)known), high = fmin(part / share, 1);
+    return (struct windrow_interval){fmax(part - spread, 0), sqrt(part * high), fmin(high + spread / share, 1)};
 }
 
 static int group_order(const void *a, const void *b)
@@ -245,7 +245,7 @@ static enum windrow_status shard_on_trial(const struct windrow_plan_options *opt
 static void plan_disk(struct windrow_plan *plan, const struct trial *trial)
 {
     double doublings = trial->share < 1 ? -log2(trial->share) : 0;
-    plan->link_bits = (struct windrow_interval){trial->link_bits * fmax(sqrt(trial->share), LINK_BITS_LEAST_SHARE),
+    plan->link_bits = (struct windrow_interval){trial->link_bits * fmax(pow(trial->share, LINK_BITS_LEAST_POWER), LINK_BITS_LEAST_SHARE),
                                                 trial->link_bits + LINK_BITS_DOUBLING * doublings,
                                                 trial->link_bits + LINK_BITS_DOUBLING_MOST * doublings};
     double least = fmax(1 - PAGE_BYTES_DOUBLING_MOST * doublings, 0.5), usual = fmax(1 - PAGE_BYTES_DOUBLING * doublings, 0.7);
@@ -279,19 +279,29 @@ static void plan_time(struct windrow_plan *plan, const struct trial *trial, unsi
                                                    2 * RANK_OWN_SECONDS + plan->rank_seconds.high + beside.high};
 }
 
-static void plan_counts(struct windrow_plan *plan, struct windrow_census *census)
+static enum windrow_status plan_counts(struct windrow_plan *plan, struct windrow_census *census)
 {
+    const struct {
+        const struct windrow_sample *sample;
+        enum windrow_sample_aspect aspect;
+        struct windrow_interval *interval;
+    } counts[] = {
+        {&census->pages, WINDROW_SAMPLE_MET, &plan->pages},        {&census->pages, WINDROW_SAMPLE_CRAWLED, &plan->crawled_pages},
+        {&census->pages, WINDROW_SAMPLE_LINKING, &plan->core_pages}, {&census->hosts, WINDROW_SAMPLE_MET, &plan->hosts},
+        {&census->links, WINDROW_SAMPLE_MET, &plan->links},
+    };
+    for (size_t index = 0; index < sizeof counts / sizeof counts[0]; index++) {
+        enum windrow_status status = count(plan, census, counts[index].sample, counts[index].aspect, counts[index].interval);
+        if (status)
+            return status;
+    }
     plan->lines = read_share(plan, census, census->lines);
     plan->fields = read_share(plan, census, census->fields);
-    plan->pages = counted(plan, census, &census->pages, WINDROW_SAMPLE_MET);
-    plan->crawled_pages = counted(plan, census, &census->pages, WINDROW_SAMPLE_CRAWLED);
-    plan->core_pages = counted(plan, census, &census->pages, WINDROW_SAMPLE_LINKING);
-    plan->hosts = counted(plan, census, &census->hosts, WINDROW_SAMPLE_MET);
-    plan->links = counted(plan, census, &census->links, WINDROW_SAMPLE_MET);
     plan->core_links = product(plan->links, core_link_share(census, plan->share));
     plan->dangling_share = rest_share(plan->core_pages, plan->pages);
     plan->frontier_share = rest_share(plan->crawled_pages, plan->pages);
     count_variants(plan, census);
+    return WINDROW_OK;
 }
 
 static enum windrow_status plan_within(const struct windrow_plan_options *options, const struct windrow_dump_paths *paths, const char *directory,
@@ -310,15 +320,16 @@ static enum windrow_status plan_within(const struct windrow_plan_options *option
     if (status)
         goto out;
     windrow_meter_stage(meter, "reading dumps", "URLs", 0);
-    struct windrow_census_options count = {.places = places, .crew = crew, .meter = meter, .memory_bytes = options->memory_bytes / 2,
+    struct windrow_census_options census_options = {.places = places, .crew = crew, .meter = meter, .memory_bytes = options->memory_bytes / 2,
                                            .keep_nofollow = options->keep_nofollow, .trial_path = dump, .trial_bytes = options->sample_bytes};
-    status = windrow_census_take(&count, &census);
+    status = windrow_census_take(&census_options, &census);
     windrow_meter_stage_end(meter);
     if (status)
         goto out;
     plan->basis = windrow_places_basis(places);
     plan->share = windrow_places_share(places);
-    plan_counts(plan, &census);
+    if ((status = plan_counts(plan, &census)))
+        goto out;
     double read_in_trial = census.bytes ? (double)census.trial_bytes / (double)census.bytes : 1;
     trial.share = fmin(plan->share * read_in_trial, 1);
     trial.fields = (double)census.fields * read_in_trial;

@@ -6,6 +6,9 @@
 
 enum { LEAST = 16, PLACES_MOST = 255 };
 
+/* What was not met at all may still be met this often, with 95 % certainty: the rule of three (Hanley & Lippman-Hand 1983). */
+#define NEVER_SEEN 3.0
+
 static uint32_t slot_count(uint32_t most)
 {
     uint32_t slots = 2 * LEAST;
@@ -119,8 +122,11 @@ void windrow_sample_join(struct windrow_sample *into, const struct windrow_sampl
         if (!ours)
             continue;
         memcpy(ours->note, theirs->note, sizeof ours->note);
-        for (int aspect = 0; aspect < WINDROW_SAMPLE_ASPECTS; aspect++)
+        for (int aspect = 0; aspect < WINDROW_SAMPLE_ASPECTS; aspect++) {
             add_places(ours, aspect, theirs->places[aspect]);
+            if (theirs->places[aspect])
+                ours->last_place[aspect] = theirs->last_place[aspect];
+        }
     }
 }
 
@@ -166,23 +172,48 @@ static double growth(const struct incidences *counts, double share)
     return exp2(sum);
 }
 
-struct windrow_interval windrow_sample_estimate(const struct windrow_sample *sample, enum windrow_sample_aspect aspect, uint64_t place_count,
-                                                double share)
+/* The standard error of the number of things met in one place only, from how they lie over the places. */
+static enum windrow_status once_error(const struct windrow_sample *sample, enum windrow_sample_aspect aspect, uint32_t place_count, double *error)
+{
+    double mean = 0, squares = 0;
+    uint32_t *once_in = calloc((size_t)place_count + 1, sizeof *once_in);
+    if (!once_in)
+        return windrow_fail(WINDROW_RESOURCE, "out of memory for an estimate");
+    for (uint32_t index = 0; index < sample->count; index++) {
+        const struct windrow_sample_entry *entry = &sample->entries[index];
+        if (entry->places[aspect] == 1 && entry->last_place[aspect] <= place_count)
+            once_in[entry->last_place[aspect]]++;
+    }
+    for (uint32_t place = 1; place <= place_count; place++)
+        mean += (double)once_in[place] / place_count;
+    for (uint32_t place = 1; place <= place_count; place++)
+        squares += ((double)once_in[place] - mean) * ((double)once_in[place] - mean);
+    free(once_in);
+    *error = sqrt(squares * place_count / fmax(place_count - 1.0, 1));
+    return WINDROW_OK;
+}
+
+enum windrow_status windrow_sample_estimate(const struct windrow_sample *sample, enum windrow_sample_aspect aspect, uint32_t place_count,
+                                            double share, struct windrow_interval *interval)
 {
     struct incidences counts = count_incidences(sample, aspect);
-    double scale = ldexp(1, (int)sample->halvings), spread = 3 * sqrt(counts.all * (1 - 1 / scale));
+    double scale = ldexp(1, (int)sample->halvings), spread = 3 * sqrt(counts.all * (1 - 1 / scale)), error = 0;
+    *interval = (struct windrow_interval){0};
     if (counts.all == 0)
-        return (struct windrow_interval){0};
-    if (share >= 1)
-        return (struct windrow_interval){fmax(counts.all - spread, 0) * scale, counts.all * scale, (counts.all + spread) * scale};
-    double high = counts.all + counts.once * (1 - share) / share, low = counts.all;
-    if (counts.once > 0) {
-        double places = place_count > 1 ? (double)place_count : 2;
-        low += counts.once * counts.once / (2 * counts.twice * places / (places - 1) + counts.once * share / (1 - share));
+        return WINDROW_OK;
+    if (share >= 1) {
+        *interval = (struct windrow_interval){fmax(counts.all - spread, 0) * scale, counts.all * scale, (counts.all + spread) * scale};
+        return WINDROW_OK;
     }
-    double point = counts.all * growth(&counts, share);
-    high = fmax(high, low);
-    point = fmin(fmax(point, low), high);
+    enum windrow_status status = once_error(sample, aspect, place_count, &error);
+    if (status)
+        return status;
+    double places = fmax(place_count, 2), odds = share / (1 - share);
+    double high = counts.all + fmax(counts.once + 2 * error, NEVER_SEEN) / odds, low = counts.all;
+    double once = fmax(counts.once - 2 * error, 0), twice = counts.twice + 1 + 2 * sqrt(counts.twice + 1);
+    low += once * once / (2 * twice * places / (places - 1) + counts.once * odds);
+    double point = fmin(fmax(counts.all * growth(&counts, share), low), counts.all + counts.once / odds);
     double unsure = 1 + spread / counts.all;
-    return (struct windrow_interval){low / unsure * scale, point * scale, high * unsure * scale};
+    *interval = (struct windrow_interval){low / unsure * scale, point * scale, high * unsure * scale};
+    return WINDROW_OK;
 }

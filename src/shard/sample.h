@@ -23,7 +23,7 @@ enum windrow_sample_aspect { WINDROW_SAMPLE_MET, WINDROW_SAMPLE_CRAWLED, WINDROW
 struct windrow_sample_entry {
     uint64_t group, identity;
     uint64_t note[2];                             /* the caller's */
-    uint32_t last_place[WINDROW_SAMPLE_ASPECTS];
+    uint32_t last_place[WINDROW_SAMPLE_ASPECTS];  /* up to place_count of the estimate */
     uint8_t places[WINDROW_SAMPLE_ASPECTS];       /* 255: that many or more */
 };
 
@@ -61,12 +61,14 @@ double windrow_sample_count(const struct windrow_sample *sample, enum windrow_sa
  *          things become fewer as reading goes on, so in expectation there are no more.
  *   low    D + f1² / (2 f2 m/(m−1) + f1 share/(1−share)), the lower bound of Chao & Lin 2012 ("Nonparametric lower bounds for
  *          species richness and shared species richness under sampling without replacement") for incidences.
+ *          In both, f1 is moved by two standard errors, worked out from how unevenly those things lie over the places (a
+ *          single page may name a thousand hosts), and in low f2 + 1 likewise.
  *   point  the growth exponent a (distinct ~ read^a) between a quarter, a half and all of the places, their
  *          distinct numbers being known from the incidences; 1 − a is carried on as a power of what is read, up to the
  *          whole; kept within low and high.
- * The bounds hold in expectation for places chosen at random or evenly in a dump without a trend.
+ * The bounds are for places chosen at random.
  */
-struct windrow_interval windrow_sample_estimate(const struct windrow_sample *sample, enum windrow_sample_aspect aspect, uint64_t place_count,
-                                                double share);
+enum windrow_status windrow_sample_estimate(const struct windrow_sample *sample, enum windrow_sample_aspect aspect, uint32_t place_count,
+                                            double share, struct windrow_interval *interval);
 
 #endif
