@@ -255,8 +255,8 @@ static void verify_checkpoint(const struct windrow_run *run, const char *key, st
 {
     struct windrow_checkpoint_record record;
     enum windrow_status status = windrow_ledger_get(run->ledger, key, &record, sizeof record);
-    if (status == WINDROW_NO)
-        return;
+    if (status == WINDROW_NO || (!status && !record.generation))
+        return; /* there never was one, or it is no longer named */
     char *path = NULL;
     struct windrow_map map = {.descriptor = -1};
     if (!status && !(path = windrow_path(run->directory, "state-%llu", (unsigned long long)(record.generation % 2))))

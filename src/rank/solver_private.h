@@ -76,7 +76,7 @@ static inline void windrow_solver_count_links(struct windrow_solver *solver, enu
 static inline enum windrow_status windrow_solver_stop_asked(const struct windrow_solver *solver)
 {
     if (solver->options.meter && windrow_meter_stopping(solver->options.meter))
-        return windrow_fail(WINDROW_STOPPED, "stopped");
+        return windrow_fail(WINDROW_STOPPED, "stopped; run the same command again to go on");
     return WINDROW_OK;
 }
 
