@@ -111,7 +111,7 @@ static struct windrow_interval rest_share(struct windrow_interval part, struct w
 
 /* ---- Counts ---- */
 
-/* Beginnings say less; and what was seen is there. */
+/* Beginnings say less, also of what is met again; and what was seen is there. */
 static struct windrow_interval guarded(const struct windrow_plan *plan, struct windrow_interval interval, double least)
 {
     if (plan->basis == WINDROW_PLAN_PREFIX && plan->share < 1)
@@ -126,6 +126,8 @@ static enum windrow_status count(const struct windrow_plan *plan, const struct w
 {
     double seen = sample->halvings ? 0 : windrow_sample_count(sample, aspect);
     enum windrow_status status = windrow_sample_estimate(sample, aspect, census->places, plan->share, interval);
+    if (plan->basis == WINDROW_PLAN_PREFIX)
+        interval->high = fmax(interval->high, windrow_sample_count(sample, aspect) / plan->share);
     *interval = guarded(plan, *interval, seen);
     return status;
 }
