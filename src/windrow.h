@@ -173,6 +173,12 @@ void windrow_plan_defaults(struct windrow_plan_options *options);
  * WINDROW_RESOURCE, WINDROW_STOPPED. */
 enum windrow_status windrow_plan(const struct windrow_plan_options *options, struct windrow_plan *plan);
 
+/* Whether a job that is about to begin has room on disk. Plans it from a small sample into *plan (share 0: the dumps are
+ * a pipe or of ids, or little enough, and nothing was planned). WINDROW_RESOURCE when even the low end of the plan does not
+ * fit the file systems of `out` and `temporary`: the message says how many bytes are missing. A job that was begun is
+ * not planned again. */
+enum windrow_status windrow_shard_check_disk(const struct windrow_shard_options *options, struct windrow_plan *plan);
+
 /* ---- Ranking ------------------------------------------------------------------------------- */
 
 enum windrow_method { WINDROW_METHOD_MIXED, /* Gauss-Seidel, host balance, Anderson mixing */

@@ -90,6 +90,11 @@ static void summarise(const char *store, bool already_done)
     talk("shard", "links dropped: %s", used ? line : "none");
 }
 
+static uint64_t mebibytes(double bytes)
+{
+    return (uint64_t)(bytes / (1 << 20) + 0.999);
+}
+
 /* Counts the pages that may be one, and names them in a file on request. */
 static enum windrow_status suggest(const struct windrow_shard_options *shard)
 {
@@ -115,7 +120,13 @@ enum windrow_status shard_command(int argc, char **argv)
     argp_parse(&parser, argc, argv, 0, NULL, &shard);
     bool already_done = false;
     progress_begin("shard", &shard.watch);
-    enum windrow_status status = windrow_shard(&shard, &already_done);
+    struct windrow_plan plan;
+    enum windrow_status status = windrow_shard_check_disk(&shard, &plan);
+    if (!status && plan.share > 0)
+        talk("shard", "about %s links; %s MiB of disk at the worst moment, %s MiB in the end, up to %s MiB of memory", grouped((uint64_t)plan.links.point),
+             grouped(mebibytes(plan.disk_bytes.point)), grouped(mebibytes(plan.store_bytes.point)), grouped(mebibytes((double)shard.memory_bytes)));
+    if (!status)
+        status = windrow_shard(&shard, &already_done);
     progress_end();
     if (!status) {
         summarise(shard.out, already_done);
