@@ -400,22 +400,33 @@ static enum windrow_status certify(struct job *job, struct windrow_certificate *
     return status == WINDROW_STOPPED ? stop(job) : status;
 }
 
+/* True when sweeps change nothing any more but the last bits of the scores. */
+static bool at_rest(const struct job *job)
+{
+    const struct windrow_solver_state *state = &job->solver->state;
+    enum { LOOK_BACK = 10 };
+    if (state->change_count == 0)
+        return false;
+    double now = state->changes[state->change_count - 1];
+    return now == 0 || (state->change_count > LOOK_BACK && now < 1e-13 * (1 - job->options->beta) &&
+                        now > 0.5 * state->changes[state->change_count - 1 - LOOK_BACK]);
+}
+
 /* Sweeps until the certificate proves what is wanted, or the most that can be proven (*enough is false then). */
 static enum windrow_status solve(struct job *job, struct windrow_certificate *certificate, bool *enough)
 {
     struct windrow_certificate before = {0};
     enum windrow_status status = WINDROW_OK;
     for (;;) {
-        if (job->solver->state.next_block == 0 && ready_to_certify(job)) {
-            if ((status = certify(job, certificate, false)))
+        bool rest = at_rest(job);
+        if (job->solver->state.next_block == 0 && (rest || ready_to_certify(job))) {
+            if ((status = certify(job, certificate, rest)))
                 return status;
             job->saved = false;
             *enough = proves(job, certificate);
-            if (*enough)
+            if (*enough || rest)
                 return WINDROW_OK;
-            /* A vector that is at rest to the last bit will not change any more. */
-            const struct windrow_solver_state *state = &job->solver->state;
-            if (exhausted(job, certificate, &before) || state->changes[state->change_count - 1] == 0)
+            if (exhausted(job, certificate, &before))
                 return certify(job, certificate, true);
             before = *certificate;
         }

@@ -264,7 +264,8 @@ static void verify_checkpoint(const struct windrow_run *run, const char *key, st
     if (!status)
         status = windrow_map_open(&map, path);
     if (!status && (map.bytes != record.bytes || map.bytes < sizeof record.checksum ||
-                    XXH3_64bits(map.data, map.bytes - sizeof record.checksum) != record.checksum))
+                    XXH3_64bits(map.data, map.bytes - sizeof record.checksum) != record.checksum ||
+                    memcmp(map.data + map.bytes - sizeof record.checksum, &record.checksum, sizeof record.checksum)))
         status = windrow_fail(WINDROW_DAMAGED, "the checkpoint %s does not have the checksum that the ledger names", path);
     if (status)
         report(verification);
