@@ -477,7 +477,7 @@ static size_t sort_pages(const struct windrow_batch *batch, const uint8_t *prese
 
 /* Puts the sources of all links into `sources`, by target and, within a target, ascending: a counting sort
  * of the lines by source, then a stable one of the links by target. ends[t] becomes the end of t's list. */
-static enum windrow_status sort_links(const struct windrow_batch *batch, size_t pages, const uint32_t *renumbered, uint32_t *ends, uint32_t *sources)
+static enum windrow_status sort_links(struct windrow_batch *batch, size_t pages, const uint32_t *renumbered, uint32_t *ends, uint32_t *sources)
 {
     uint32_t *line_ends = calloc(pages + 1, sizeof *line_ends);
     size_t *starts = malloc((batch->line_count + 1) * sizeof *starts);
@@ -486,25 +486,29 @@ static enum windrow_status sort_links(const struct windrow_batch *batch, size_t 
         status = windrow_fail(WINDROW_RESOURCE, "out of memory while sorting a batch; try a smaller --memory");
         goto out;
     }
-    for (size_t at = 0; at < batch->line_words; at += 2 + batch->lines[at + 1])
-        line_ends[renumbered[batch->lines[at]] + 1]++;
-    for (size_t page = 0; page < pages; page++)
+    /* The lines are renumbered in place, so that no page has to be looked up twice. */
+    for (size_t at = 0; at < batch->line_words; at += 2 + batch->lines[at + 1]) {
+        uint32_t *line = batch->lines + at, count = line[1];
+        line[0] = renumbered[line[0]];
+        line_ends[line[0] + 1]++;
+        for (uint32_t *target = line + 2; target < line + 2 + count; target++) {
+            *target = renumbered[*target];
+            ends[*target + 1]++;
+        }
+    }
+    for (size_t page = 0; page < pages; page++) {
         line_ends[page + 1] += line_ends[page];
-    for (size_t at = 0; at < batch->line_words; at += 2 + batch->lines[at + 1])
-        starts[line_ends[renumbered[batch->lines[at]]]++] = at;
-
-    for (size_t at = 0; at < batch->line_words; at += 2 + batch->lines[at + 1])
-        for (uint32_t index = 0; index < batch->lines[at + 1]; index++)
-            ends[renumbered[batch->lines[at + 2 + index]] + 1]++;
-    for (size_t page = 0; page < pages; page++)
         ends[page + 1] += ends[page];
+    }
+    for (size_t at = 0; at < batch->line_words; at += 2 + batch->lines[at + 1])
+        starts[line_ends[batch->lines[at]]++] = at;
     for (size_t line = 0; line < batch->line_count; line++) {
         const uint32_t *words = batch->lines + starts[line];
         if (line + 4 < batch->line_count)
             __builtin_prefetch(batch->lines + starts[line + 4]);
-        uint32_t source = renumbered[words[0]];
+        uint32_t source = words[0];
         for (uint32_t index = 0; index < words[1]; index++)
-            sources[ends[renumbered[words[2 + index]]]++] = source;
+            sources[ends[words[2 + index]]++] = source;
     }
 out:
     free(line_ends);
