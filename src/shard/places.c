@@ -39,7 +39,8 @@ struct windrow_places {
     uint64_t next_window;
     uint64_t wanted_count;
     uint64_t taken_count;
-    uint64_t file_begin;         /* where the file begins, all put one behind another */
+    uint64_t taken_bytes;        /* of windows; the last one of a file may be short */
+    uint64_t file_window;        /* the file's first window */
     int descriptor;
     enum windrow_dump_shape file_shape;
 };
@@ -105,6 +106,11 @@ static enum windrow_status open_dumps(struct windrow_places *places, const char 
     return windrow_dump_open(&options, NULL, &places->dump);
 }
 
+static uint64_t windows_of(const struct windrow_places *places, size_t file)
+{
+    return (places->file_bytes[file] + WINDROW_PLACES_WINDOW_BYTES - 1) / WINDROW_PLACES_WINDOW_BYTES;
+}
+
 enum windrow_status windrow_places_open(const char *const *dumps, size_t dump_count, enum windrow_shape shape, bool full, uint64_t budget_bytes,
                                         struct windrow_places **out)
 {
@@ -123,7 +129,8 @@ enum windrow_status windrow_places_open(const char *const *dumps, size_t dump_co
         places->basis = full || (all_plain && places->total_bytes <= budget_bytes) ? WINDROW_PLAN_WHOLE
                         : all_plain                                                ? WINDROW_PLAN_PLACES
                                                                                    : WINDROW_PLAN_PREFIX;
-        places->window_count = (places->total_bytes + WINDROW_PLACES_WINDOW_BYTES - 1) / WINDROW_PLACES_WINDOW_BYTES;
+        for (size_t file = 0; file < dump_count; file++)
+            places->window_count += windows_of(places, file);
         places->wanted_count = budget_bytes / WINDROW_PLACES_WINDOW_BYTES;
         if (places->wanted_count < 2)
             places->wanted_count = 2;
@@ -287,17 +294,18 @@ static enum windrow_status read_places(struct windrow_places *places, struct win
         double chance = (double)(XXH3_64bits(&window, sizeof window) >> 11) * 0x1p-53;
         if (chance * (double)left >= (double)(places->wanted_count - places->taken_count))
             continue;
-        uint64_t at = window * WINDROW_PLACES_WINDOW_BYTES;
-        while (at >= places->file_begin + places->file_bytes[places->file] && places->file + 1 < places->dump_count) {
-            places->file_begin += places->file_bytes[places->file++];
+        while (window >= places->file_window + windows_of(places, places->file)) {
+            places->file_window += windows_of(places, places->file++);
             if (places->descriptor >= 0)
                 windrow_files.close(places->descriptor);
             places->descriptor = -1;
         }
         if (places->descriptor < 0 && (status = open_window_file(places)))
             break;
-        status = read_window(places, chunk, at - places->file_begin);
+        uint64_t at = (window - places->file_window) * WINDROW_PLACES_WINDOW_BYTES, left_bytes = places->file_bytes[places->file] - at;
+        status = read_window(places, chunk, at);
         places->taken_count++;
+        places->taken_bytes += left_bytes < WINDROW_PLACES_WINDOW_BYTES ? left_bytes : WINDROW_PLACES_WINDOW_BYTES;
         places->place++; /* a window in which no line begins is a place too: one without anything new */
     }
     places->read_bytes += chunk->bytes;
@@ -346,7 +354,7 @@ double windrow_places_share(const struct windrow_places *places)
 {
     double share = 1;
     if (places->basis == WINDROW_PLAN_PLACES)
-        share = (double)places->taken_count / (double)places->window_count;
+        share = (double)places->taken_bytes / (double)places->total_bytes;
     else if (places->basis == WINDROW_PLAN_PREFIX)
         share = places->total_bytes ? (double)consumed_bytes(places) / (double)places->total_bytes : 1;
     return share > 1 ? 1 : share;

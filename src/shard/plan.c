@@ -23,6 +23,7 @@
 /* Manifest records of blocks: 20 KB more for 17 M links. Manifest and ledger of an empty store, and the rounding of a dozen files. */
 #define MANIFEST_LINK_BYTES 0.0012
 #define STORE_OWN_BYTES 80e3
+#define STORE_LOG_BYTES 120e3 /* malformed lines: a thousand at most are kept */
 /* Scratch at its largest, and scratch and store together, over the finished store: 1.2 to 1.6 and 1.3 to 1.75. */
 static const struct windrow_interval scratch_ratio = {1.1, 1.5, 1.8}, disk_ratio = {1.2, 1.65, 2.0};
 /* What nobody has measured yet. */
@@ -260,7 +261,7 @@ static void plan_disk(struct windrow_plan *plan, const struct trial *trial)
                                        page_bytes.point, trial->name_bytes};
     struct windrow_plan_sizes high = {plan->links.high, plan->pages.high, plan->core_pages.high, plan->hosts.high, plan->link_bits.high, page_bytes.high,
                                       trial->name_bytes};
-    plan->store_bytes = (struct windrow_interval){0.95 * store_bytes(&low), store_bytes(&point), 1.05 * store_bytes(&high)};
+    plan->store_bytes = (struct windrow_interval){0.95 * store_bytes(&low), store_bytes(&point), 1.05 * store_bytes(&high) + STORE_LOG_BYTES};
     plan->scratch_bytes = product(plan->store_bytes, scratch_ratio);
     plan->disk_bytes = product(plan->store_bytes, disk_ratio);
     plan->run_bytes = (struct windrow_interval){
