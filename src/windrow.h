@@ -266,6 +266,7 @@ extern const char *const windrow_state_names[WINDROW_STATES];
 struct windrow_standing {
     enum windrow_state state;
     const char *stage;          /* of a store that is not whole yet: what is, or was, being done; else NULL */
+    double stage_share;         /* how much of that stage is done, 0 to 1; negative: unknown */
     bool sharded;               /* the store is whole: the next eight lines are known */
     uint64_t pages;
     uint64_t crawled_pages;

@@ -79,6 +79,8 @@ static enum windrow_status print_json(const struct windrow_standing *standing)
         {"store_bytes", count_or_null(true, standing->store_bytes)},
         {"link_bits", number_or_null(sharded && standing->links > 0, standing->link_bits)},
         {"dropped", dropped},
+        {"stage", standing->stage ? json_string(standing->stage) : json_null()},
+        {"stage_share", number_or_null(standing->stage_share >= 0, standing->stage_share)},
     };
     for (int i = 0; i < WINDROW_DROP_COUNT && sharded; i++)
         json_object_set_new(dropped, windrow_drop_names[i], json_integer((json_int_t)standing->dropped[i]));
@@ -98,7 +100,11 @@ static void print_plain(const struct windrow_standing *standing)
 {
     printf("state           %s\n", windrow_state_names[standing->state]);
     if (standing->stage)
-        printf("stage           %s\n", standing->stage);
+        printf("stage           %s", standing->stage);
+    if (standing->stage && standing->stage_share >= 0)
+        printf(", %.0f %% of it done", 100 * standing->stage_share);
+    if (standing->stage)
+        printf("\n");
     if (standing->sharded) {
         printf("pages           %s, %s of them crawled, %s dangling\n", grouped(standing->pages), grouped(standing->crawled_pages),
                grouped(standing->dangling_pages));

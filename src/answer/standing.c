@@ -21,6 +21,8 @@ static enum windrow_status read_sharding(const char *store, struct windrow_stand
         return status;
     standing->state = job.running ? WINDROW_STATE_SHARDING : WINDROW_STATE_STOPPED;
     standing->stage = stage_names[job.stage];
+    standing->stage_share = job.share;
+    standing->seconds_left = job.seconds_left;
     return WINDROW_OK;
 }
 
@@ -70,7 +72,7 @@ static void read_run_facts(const struct windrow_run_facts *facts, struct windrow
 
 enum windrow_status windrow_standing_read(const char *path, const char *run_name, struct windrow_standing *standing)
 {
-    *standing = (struct windrow_standing){.seconds_left = -1, .store_bytes = windrow_directory_bytes(path)};
+    *standing = (struct windrow_standing){.seconds_left = -1, .stage_share = -1, .store_bytes = windrow_directory_bytes(path)};
     struct windrow_store *store = NULL;
     struct windrow_run *run = NULL;
     struct windrow_job_status job;

@@ -60,6 +60,8 @@ struct job {
     const struct windrow_linkmerge *merge;
     uint64_t duplicates;                 /* links found in more than one batch */
     uint64_t memory_bytes;               /* for data */
+    double began;                        /* of this process's work after reading */
+    double seconds_before;               /* spent by earlier processes after reading */
 };
 
 static enum windrow_status memory(void)
@@ -96,8 +98,9 @@ static enum windrow_status run_task(void *context, uint64_t number, unsigned wor
         return windrow_fail(WINDROW_STOPPED, "stopped at a checkpoint; run the same command again to go on");
     if ((status = stage->task(job, number)) || (status = windrow_directory_sync(job->scratch)))
         return status;
-    struct windrow_ledger_record record = {key, NULL, 0};
-    if ((status = windrow_ledger_commit(job->ledger, &record, 1)))
+    double seconds = job->seconds_before + windrow_seconds() - job->began;
+    struct windrow_ledger_record records[] = {{key, NULL, 0}, {"seconds", &seconds, sizeof seconds}};
+    if ((status = windrow_ledger_commit(job->ledger, records, 2)))
         return status;
     for (const char *const *format = stage->spent; format && *format; format++) {
         char *path = windrow_path(job->scratch, *format, (unsigned long long)number);
@@ -116,10 +119,16 @@ static enum windrow_status run_stage(struct job *job, struct stage *stage, uint6
         return windrow_fail(WINDROW_RESOURCE, "merging %llu batches needs %llu MiB; name a larger --memory",
                             (unsigned long long)job->reading.run_count, (unsigned long long)((task_memory_bytes + MEMORY_OWN) >> 20) + 1);
     stage->job = job;
+    char key[64];
+    snprintf(key, sizeof key, "count/%s", stage->name);
+    struct windrow_ledger_record record = {key, &count, sizeof count};
+    enum windrow_status status = windrow_ledger_commit(job->ledger, &record, 1);
+    if (status)
+        return status;
     if (fitting >= workers)
         return windrow_crew_run(job->crew, count, run_task, stage);
     struct windrow_crew *crew;
-    enum windrow_status status = windrow_crew_create((unsigned)fitting, &crew);
+    status = windrow_crew_create((unsigned)fitting, &crew);
     if (status)
         return status;
     status = windrow_crew_run(crew, count, run_task, stage);
@@ -623,6 +632,10 @@ static enum windrow_status work(struct job *job)
     struct mapped mapped = {.core_map.descriptor = -1, .hosts.descriptor = -1};
     double began = windrow_seconds();
     if ((status = prepare_tables(job)) || (status = read_dumps(job)))
+        return status;
+    job->began = windrow_seconds();
+    status = windrow_ledger_get(job->ledger, "seconds", &job->seconds_before, sizeof job->seconds_before);
+    if (status && status != WINDROW_NO)
         return status;
     if ((status = merge_pages(job)) || (status = write_table(job)) || (status = remap_links(job)))
         return status;

@@ -34,6 +34,41 @@ static enum windrow_status count_one(void *context, const char *key, const void 
     return WINDROW_OK;
 }
 
+/* What a stage takes of a whole job, about: measured on a synthetic crawl of 20 million links, 2 threads. */
+static const double weights[] = {[WINDROW_JOB_READING] = 0.72, [WINDROW_JOB_PAGES] = 0.06, [WINDROW_JOB_TABLE] = 0.09,
+                                 [WINDROW_JOB_REMAP] = 0.05,   [WINDROW_JOB_LINKS] = 0.08, [WINDROW_JOB_FINISHED] = 0};
+
+/* How far the job is, and how long it would take from here at the pace so far. */
+static enum windrow_status estimate(struct windrow_ledger *ledger, struct windrow_job_status *job)
+{
+    static const char *const counts[] = {[WINDROW_JOB_PAGES] = "count/part", [WINDROW_JOB_TABLE] = "count/table",
+                                         [WINDROW_JOB_REMAP] = "count/remap", [WINDROW_JOB_LINKS] = "count/links"};
+    double seconds = 0, done = 0;
+    uint64_t count = 0;
+    enum windrow_status status = WINDROW_OK;
+    job->share = job->seconds_left = -1;
+    if (job->stage == WINDROW_JOB_READING) {
+        if (job->reading.total_bytes)
+            job->share = (double)job->reading.consumed_bytes / (double)job->reading.total_bytes;
+    } else {
+        status = windrow_ledger_get(ledger, counts[job->stage], &count, sizeof count);
+        if (!status && count)
+            job->share = (double)job->done_tasks / (double)count;
+        if (!status)
+            status = windrow_ledger_get(ledger, "seconds", &seconds, sizeof seconds);
+    }
+    if (status)
+        return status == WINDROW_NO ? WINDROW_OK : status;
+    for (int stage = 0; stage < (int)job->stage; stage++)
+        done += weights[stage];
+    if (job->share >= 0)
+        done += weights[job->stage] * job->share;
+    seconds += job->reading.seconds;
+    if (job->share >= 0 && done > 0 && seconds > 0)
+        job->seconds_left = seconds * (1 - done) / done;
+    return WINDROW_OK;
+}
+
 enum windrow_status windrow_job_status(const char *store, struct windrow_job_status *out)
 {
     static const char *const marks[] = {[WINDROW_JOB_PAGES] = "part/", [WINDROW_JOB_TABLE] = "table/", [WINDROW_JOB_REMAP] = "remap/",
@@ -62,8 +97,9 @@ enum windrow_status windrow_job_status(const char *store, struct windrow_job_sta
         out->elapsed_seconds = outcome.elapsed_seconds;
         out->peak_memory_bytes = outcome.peak_memory_bytes;
         memcpy(out->dropped, outcome.dropped, sizeof out->dropped);
+        out->share = 1;
     } else if (status == WINDROW_NO) {
-        status = WINDROW_OK;
+        status = estimate(ledger, out);
     }
 out:
     windrow_ledger_close(ledger);

@@ -14,6 +14,8 @@ struct windrow_job_status {
     bool running;                          /* some process works on it now */
     struct windrow_reading_state reading;
     uint64_t done_tasks;                   /* of the stage; 0 while reading */
+    double share;                          /* of the stage, 0 to 1; negative: unknown */
+    double seconds_left;                   /* of the whole job, were it going on; negative: unknown */
     uint64_t dropped[WINDROW_DROP_COUNT];  /* of the finished job: the links of its dumps that were left out, by reason */
     double elapsed_seconds;                /* of the finished job, its last process alone */
     uint64_t peak_memory_bytes;            /* likewise */

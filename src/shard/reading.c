@@ -39,6 +39,7 @@ struct reader {
     bool ended;
     bool write_now;
     double batch_began;
+    double began, seconds_before;  /* of reading; by earlier processes */
     uint64_t fields, bad_fields;   /* of the whole job, for the share */
     struct worker *workers;
 };
@@ -342,6 +343,8 @@ static enum windrow_status commit(struct reader *reader, unsigned workers)
         records[count] = (struct windrow_ledger_record){names[count], &worker->written.pages, sizeof worker->written.pages};
         count++;
     }
+    windrow_dump_progress(reader->dump, &state->consumed_bytes, &state->total_bytes);
+    state->seconds = reader->seconds_before + windrow_seconds() - reader->began;
     state->position = reader->position;
     state->finished = reader->ended;
     if (!status) {
@@ -389,7 +392,8 @@ static enum windrow_status read_all(struct reader *reader, unsigned workers)
 enum windrow_status windrow_reading_run(const struct windrow_reading *reading, struct windrow_reading_state *state)
 {
     unsigned workers = windrow_crew_workers(reading->crew);
-    struct reader reader = {.reading = reading, .state = state, .fields = state->fields, .bad_fields = state->bad_fields};
+    struct reader reader = {.reading = reading, .state = state, .fields = state->fields, .bad_fields = state->bad_fields,
+                            .began = windrow_seconds(), .seconds_before = state->seconds};
     struct windrow_dump_options options = {.paths = reading->options->dumps, .path_count = reading->options->dump_count,
                                            .shape = (enum windrow_dump_shape)reading->options->shape,
                                            .with_ids = reading->fold->with_names};

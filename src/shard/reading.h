@@ -24,6 +24,9 @@ struct windrow_reading_state {
     uint64_t links;         /* kept, repeated ones across batches included */
     uint64_t run_pages;     /* of all runs together */
     uint64_t dropped[WINDROW_DROP_COUNT];
+    uint64_t consumed_bytes; /* of the dumps as they lie on disk */
+    uint64_t total_bytes;   /* 0: a pipe */
+    double seconds;         /* that reading took, over all processes of the job */
     uint64_t samples;       /* lines in the log of malformed lines */
     uint64_t finished;      /* 1: all dumps are read */
     uint64_t hopeless;      /* 1: the share of malformed fields is above bad_max; never in the ledger */
