@@ -355,7 +355,10 @@ static bool ready_to_certify(const struct job *job)
 static enum windrow_status sweep_once(struct job *job)
 {
     struct windrow_solver_state *state = &job->solver->state;
-    windrow_meter_stage(&job->meter, "sweeping", "links", job->web.links[WINDROW_BLOCK_CORE]);
+    uint64_t links = job->web.links[WINDROW_BLOCK_CORE];
+    if (job->options->method == WINDROW_METHOD_POWER)
+        links += job->web.links[WINDROW_BLOCK_RIM];
+    windrow_meter_stage(&job->meter, "sweeping", "links", links);
     job->meter.now.sweep = state->sweeps + 1;
     job->meter.now.error_l1 = windrow_solver_expected_error(job->solver);
     job->meter.now.seconds_left = seconds_left(job);
