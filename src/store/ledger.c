@@ -177,7 +177,8 @@ enum windrow_status windrow_ledger_each(struct windrow_ledger *ledger, const cha
     }
     enum windrow_status status = WINDROW_OK;
     MDB_val key = {strlen(prefix), (void *)prefix}, value;
-    for (code = mdb_cursor_get(cursor, &key, &value, MDB_SET_RANGE); !code && !status; code = mdb_cursor_get(cursor, &key, &value, MDB_NEXT)) {
+    /* LMDB refuses an empty key, even to look for. */
+    for (code = mdb_cursor_get(cursor, &key, &value, *prefix ? MDB_SET_RANGE : MDB_FIRST); !code && !status; code = mdb_cursor_get(cursor, &key, &value, MDB_NEXT)) {
         char name[KEY_BYTES_MOST + 1];
         if (key.mv_size > KEY_BYTES_MOST || key.mv_size < strlen(prefix) || memcmp(key.mv_data, prefix, strlen(prefix)))
             break;

@@ -203,6 +203,14 @@ static enum windrow_status put_all(struct sink *sink, struct windrow_manifest *m
     return put(sink, "library/zstd", manifest->zstd_library, strlen(manifest->zstd_library));
 }
 
+#define SEAL_BYTES_MOST 200
+
+static size_t seal_text(char *text, unsigned long long bytes, unsigned long long checksum, unsigned long long fingerprint)
+{
+    return (size_t)snprintf(text, SEAL_BYTES_MOST, "windrow store, format %d\nmanifest %llu bytes, checksum %016llx\nfingerprint %016llx\n",
+                            WINDROW_FORMAT_VERSION, bytes, checksum, fingerprint);
+}
+
 enum windrow_status windrow_manifest_write(const char *path, struct windrow_manifest *manifest)
 {
     enum windrow_status status = WINDROW_OK;
@@ -247,11 +255,9 @@ enum windrow_status windrow_manifest_write(const char *path, struct windrow_mani
     uint64_t bytes, checksum;
     if ((status = windrow_file_checksum(data, &bytes, &checksum)))
         goto out;
-    char text[200];
-    int length = snprintf(text, sizeof text, "windrow store, format %d\nmanifest %llu bytes, checksum %016llx\nfingerprint %016llx\n",
-                          WINDROW_FORMAT_VERSION, (unsigned long long)bytes, (unsigned long long)checksum,
-                          (unsigned long long)manifest->facts.fingerprint);
-    status = windrow_file_replace(seal, text, (size_t)length);
+    char text[SEAL_BYTES_MOST];
+    size_t length = seal_text(text, bytes, checksum, manifest->facts.fingerprint);
+    status = windrow_file_replace(seal, text, length);
 out:
     if (sink.transaction)
         mdb_txn_abort(sink.transaction);
@@ -287,6 +293,12 @@ static enum windrow_status check_seal(const char *path, uint64_t *fingerprint)
     if (version != WINDROW_FORMAT_VERSION) {
         status = windrow_fail(WINDROW_DAMAGED, "the store %s has format %d; this windrow reads format %d: shard the dumps again", path, version,
                               WINDROW_FORMAT_VERSION);
+        goto out;
+    }
+    char exact[SEAL_BYTES_MOST];
+    size_t length = seal_text(exact, sealed_bytes, sealed_checksum, sealed_fingerprint);
+    if (text.bytes != length + 1 || memcmp(text.data, exact, length) != 0) {
+        status = windrow_fail(WINDROW_DAMAGED, "%s is damaged; shard the dumps again", seal);
         goto out;
     }
     uint64_t bytes, checksum;
