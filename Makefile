@@ -46,9 +46,17 @@ check:
 sanitize:
 	scripts/check --no-setup --sanitize --build $(BUILD)
 
+LINKS ?= 10M
+
+bench:
+	scripts/bench --build $(BUILD) --links $(LINKS)
+
+bench-billion:
+	scripts/bench --build $(BUILD) billion
+
 clean:
 	rm -rf $(BUILD)
 
-.PHONY: all units check sanitize clean
+.PHONY: all units check sanitize bench bench-billion clean
 .SECONDARY:
 -include $(shell find $(BUILD) -name '*.d' 2>/dev/null)

@@ -25,3 +25,16 @@ $(HYPERLINKS): $(HYPERLINKS).o $(BUILD)/tests/outside/reference.o $(BUILD)/tests
 runs: $(BUILD)/windrow $(BUILD)/crawlgen $(RUNS) $(HYPERLINKS)
 
 .PHONY: runs
+
+# Programs that measure, for scripts/bench.
+BENCH_SOURCES = $(wildcard tests/bench/*_bench.c)
+BENCHES = $(BENCH_SOURCES:%.c=$(BUILD)/%)
+
+$(BUILD)/tests/bench/%_bench: $(BUILD)/tests/bench/%_bench.o $(BUILD)/tests/bench/bench.o $(BUILD)/libwindrow.a
+	@echo '  $@' && $(CC) $(ALL_CFLAGS) -o $@ $^ $(LIBRARIES) $(BENCH_LIBRARIES)
+
+$(BUILD)/tests/bench/igraph_bench: BENCH_LIBRARIES = $(shell pkg-config --libs igraph)
+
+benches: $(BUILD)/windrow $(BUILD)/crawlgen $(BENCHES) $(HYPERLINKS)
+
+.PHONY: benches
