@@ -40,13 +40,14 @@ enum windrow_status windrow_buffer_reserve(struct windrow_buffer *buffer, size_t
 {
     if (buffer->capacity_bytes - buffer->bytes >= more)
         return WINDROW_OK;
-    size_t wanted = buffer->bytes + more;
+    /* Nothing is that large; beyond it the sums below would begin again at 0. */
+    bool absurd = more > SIZE_MAX / 2 || buffer->bytes > SIZE_MAX / 2 - more;
     size_t capacity = buffer->capacity_bytes ? buffer->capacity_bytes : 256;
-    while (capacity < wanted)
+    while (!absurd && capacity < buffer->bytes + more)
         capacity += capacity / 2 + 1;
-    uint8_t *data = realloc(buffer->data, capacity);
+    uint8_t *data = absurd ? NULL : realloc(buffer->data, capacity);
     if (!data)
-        return windrow_fail(WINDROW_RESOURCE, "out of memory: %zu more bytes were needed; a smaller --memory leaves more room", capacity);
+        return windrow_fail(WINDROW_RESOURCE, "out of memory: %zu more bytes were needed; a smaller --memory leaves more room", more);
     buffer->data = data;
     buffer->capacity_bytes = capacity;
     return WINDROW_OK;
@@ -71,13 +72,17 @@ void windrow_buffer_free(struct windrow_buffer *buffer)
 
 char *windrow_path(const char *directory, const char *name_format, ...)
 {
-    char name[512];
+    char *name = NULL, *path = NULL;
     va_list arguments;
     va_start(arguments, name_format);
-    vsnprintf(name, sizeof name, name_format, arguments);
+    int name_bytes = vasprintf(&name, name_format, arguments);
     va_end(arguments);
-    char *path = NULL;
-    return asprintf(&path, "%s/%s", directory, name) < 0 ? NULL : path;
+    if (name_bytes < 0)
+        return NULL;
+    if (asprintf(&path, "%s/%s", directory, name) < 0)
+        path = NULL;
+    free(name);
+    return path;
 }
 
 static enum windrow_status write_all(int descriptor, const char *path, const uint8_t *data, size_t bytes)
