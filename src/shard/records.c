@@ -30,14 +30,15 @@ enum windrow_status windrow_records_put(struct windrow_records_writer *records, 
     uint8_t *out = raw->data + raw->bytes;
     out = windrow_varint_put(out, shared);
     out = windrow_varint_put(out, rest);
-    memcpy(out, record->key + shared, rest);
+    if (rest)
+        memcpy(out, record->key + shared, rest);
     out = windrow_varint_put(out + rest, record->value_bytes);
     if (record->value_bytes)
         memcpy(out, record->value, record->value_bytes);
     raw->bytes = (size_t)(out + record->value_bytes - raw->data);
     records->count++;
     before->bytes = shared;
-    if ((status = windrow_buffer_append(before, record->key + shared, rest)))
+    if (rest && (status = windrow_buffer_append(before, record->key + shared, rest)))
         return status;
     return windrow_frames_fill(&records->frames, NULL);
 }

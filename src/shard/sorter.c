@@ -310,7 +310,8 @@ enum windrow_status windrow_sorter_put(struct windrow_sorter *sorter, const stru
     uint8_t *at = sorter->arena + sorter->arena_bytes;
     uint32_t lengths[2] = {(uint32_t)record->key_bytes, (uint32_t)record->value_bytes};
     memcpy(at, lengths, 8);
-    memcpy(at + 8, record->key, record->key_bytes);
+    if (record->key_bytes)
+        memcpy(at + 8, record->key, record->key_bytes);
     if (record->value_bytes)
         memcpy(at + 8 + record->key_bytes, record->value, record->value_bytes);
     sorter->arena_bytes += bytes;

@@ -198,7 +198,7 @@ static void append(struct windrow_buffer *text, const char *more)
 
 static void append_url(struct dice *dice, struct windrow_buffer *text, int page)
 {
-    char url[64] = "nonsense";
+    char url[128] = "nonsense";
     if (page == FTP)
         strcpy(url, "ftp://h1.example/");
     else if (page >= 0)
@@ -263,7 +263,7 @@ static void file_of_ids(struct dice *dice, const struct world *world, struct mod
 
 static int page_of(const uint8_t *key, size_t key_bytes)
 {
-    char url[64], expected[64];
+    char url[128], expected[128];
     int host, page;
     size_t bytes = windrow_key_url((const char *)key, key_bytes, url, sizeof url - 1);
     url[bytes] = 0;
@@ -369,7 +369,7 @@ static uint64_t check(const char *directory, const struct windrow_shard_options 
 static void write_tables(struct dice *dice, const char *directory, const struct world *world, struct windrow_shard_options *options)
 {
     struct windrow_buffer aliases = {0}, drop = {0}, names = {0};
-    char a[64], line[160];
+    char a[128], line[256];
     for (int page = 0; page < PAGES; page++) {
         if (world->alias[page] != NONE) {
             append_url(dice, &aliases, page);
@@ -420,7 +420,7 @@ static void check_world(uint64_t seed, bool aliases, bool drop, bool with_ids)
     write_tables(&dice, directory, &world, &options);
     for (int file = 0; file < FILES; file++) {
         struct windrow_buffer text = {0};
-        char name[16];
+        char name[32];
         sprintf(name, "dump-%02d", file);
         if (with_ids && file % 3 == 0)
             file_of_ids(&dice, &world, model, &text);
