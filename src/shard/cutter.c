@@ -47,6 +47,15 @@ static enum windrow_status encode(struct windrow_cutter *cutter, const struct wi
     return write_payload(cutter, &record);
 }
 
+/* Takes the first sources away, which are written. */
+static void drop_sources(struct windrow_cutter *cutter, uint64_t count)
+{
+    size_t used = (size_t)count * sizeof(uint64_t);
+    cutter->sources.bytes -= used;
+    if (cutter->sources.bytes)
+        memmove(cutter->sources.data, cutter->sources.data + used, cutter->sources.bytes);
+}
+
 /* Writes the finished lists as a block; the sources behind them, of the current list, stay. */
 static enum windrow_status write_block(struct windrow_cutter *cutter)
 {
@@ -64,9 +73,7 @@ static enum windrow_status write_block(struct windrow_cutter *cutter)
                                         .sources = (uint64_t *)cutter->sources.data, .counts = (uint32_t *)cutter->counts.data,
                                         .near_first = first, .near_end = end};
     enum windrow_status status = encode(cutter, &input, cutter->closed_links);
-    size_t used = (size_t)cutter->closed_links * sizeof(uint64_t);
-    memmove(cutter->sources.data, cutter->sources.data + used, cutter->sources.bytes - used);
-    cutter->sources.bytes -= used;
+    drop_sources(cutter, cutter->closed_links);
     cutter->first_target = block_end;
     cutter->target_count = 0;
     cutter->closed_links = 0;
@@ -82,9 +89,7 @@ static enum windrow_status write_piece(struct windrow_cutter *cutter, size_t cou
                                         .flags = WINDROW_BLOCK_PIECE | (last ? WINDROW_BLOCK_LAST_PIECE : 0u),
                                         .sources = (uint64_t *)cutter->sources.data, .counts = &count32, .near_first = &none, .near_end = &none};
     enum windrow_status status = encode(cutter, &input, count);
-    size_t used = count * sizeof(uint64_t);
-    memmove(cutter->sources.data, cutter->sources.data + used, cutter->sources.bytes - used);
-    cutter->sources.bytes -= used;
+    drop_sources(cutter, count);
     return status;
 }
 

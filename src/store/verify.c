@@ -79,6 +79,8 @@ static int damage_order(const void *a, const void *b)
 /* Keeps the first lines in order; the others are counted. */
 static void trim(struct verification *verification)
 {
+    if (!verification->damage_count)
+        return;
     qsort(verification->damages, verification->damage_count, sizeof *verification->damages, damage_order);
     while (verification->damage_count > LINES_MOST) {
         free(verification->damages[--verification->damage_count].text);

@@ -193,7 +193,7 @@ static void dumps_make(struct dice *dice, struct model *model, struct dumps *dum
     dumps->count = 1 + dice_below(dice, FILES_MOST);
     pages_make(dice, model);
     for (size_t index = 0; index < dumps->count; index++) {
-        char name[20];
+        char name[40];
         sprintf(name, "dump-%zu", index);
         dumps->files[index] = scratch_path(dumps->directory, name);
         FILE *file = fopen(dumps->files[index], "w");
