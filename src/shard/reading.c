@@ -271,7 +271,8 @@ static void number_run(struct reader *reader, unsigned index)
 {
     struct worker *worker = &reader->workers[index];
     worker->run = index ? reader->workers[index - 1].run + reader->workers[index - 1].writes : reader->state->run_count;
-    worker->writes = !windrow_batch_empty(worker->batch);
+    /* Dumps that come to nothing leave one empty batch: the merges have something to merge. */
+    worker->writes = !windrow_batch_empty(worker->batch) || (index == 0 && reader->ended && worker->run == 0);
 }
 
 static enum windrow_status write(void *context, uint64_t task, unsigned crew_worker)
@@ -416,6 +417,11 @@ enum windrow_status windrow_reading_run(const struct windrow_reading *reading, s
     }
     if (!status)
         status = read_all(&reader, workers);
+    /* Names are for reading only; the ledger knows that it is through. */
+    char *names_path = !status && state->finished ? windrow_names_path(reading->scratch) : NULL;
+    if (names_path)
+        status = windrow_file_remove(names_path);
+    free(names_path);
     for (unsigned index = 0; reader.workers && index < workers; index++) {
         windrow_batch_destroy(reader.workers[index].batch);
         windrow_keyer_destroy(reader.workers[index].keyer);

@@ -48,7 +48,7 @@ static void story_add(struct windrow_buffer *story, const struct windrow_dump_ch
 static enum windrow_status story_read(const char *path, enum windrow_dump_shape shape, size_t chunk_bytes, size_t stop_every,
                                       struct windrow_buffer *story)
 {
-    struct windrow_dump_options options = {.paths = &path, .path_count = 1, .shape = shape, .chunk_bytes = chunk_bytes};
+    struct windrow_dump_options options = {.paths = &path, .path_count = 1, .shape = shape, .with_ids = true, .chunk_bytes = chunk_bytes};
     struct windrow_dump_chunk chunk = {0};
     struct windrow_dump_position position, *resume = NULL;
     struct windrow_dump *dump = NULL;
@@ -81,7 +81,7 @@ int LLVMFuzzerTestOneInput(const uint8_t *data, size_t bytes)
     }
     if (bytes == 0)
         return 0;
-    enum windrow_dump_shape shape = (enum windrow_dump_shape)(data[0] % 3);
+    enum windrow_dump_shape shape = (enum windrow_dump_shape)(data[0] % 4);
     size_t chunk_bytes = 1 + data[0] / 3;
     if (descriptor < 0 || ftruncate(descriptor, 0) != 0 || pwrite(descriptor, data + 1, bytes - 1, 0) != (ssize_t)bytes - 1)
         abort();

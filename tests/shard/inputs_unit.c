@@ -55,7 +55,9 @@ static struct facts facts_read(const char *path)
         size_t bytes;
         assert_int_equal(windrow_page_reader_url(reader, page, &url, &bytes), WINDROW_OK);
         windrow_buffer_append(&text, url, bytes);
-        windrow_buffer_append(&text, "* " + !windrow_store_page_crawled(store, page), 1 + windrow_store_page_crawled(store, page));
+        if (windrow_store_page_crawled(store, page))
+            windrow_buffer_append(&text, "*", 1);
+        windrow_buffer_append(&text, " ", 1);
     }
     windrow_buffer_append(&text, "", 1);
     facts = (struct facts){(char *)text.data, windrow_store_facts(store)->links, windrow_store_facts(store)->fingerprint};
@@ -272,6 +274,19 @@ static void odd_lines_lose_nothing_else(void **state)
     free(too_long);
 }
 
+static void dumps_of_nothing_make_a_store_of_nothing(void **state)
+{
+    (void)state;
+    static const char *const nothing[] = {"", "\n\n", "ftp://a.example/\tftp://b.example/\n"};
+    for (size_t i = 0; i < sizeof nothing / sizeof *nothing; i++) {
+        char *dump = file_write("nothing", nothing[i]);
+        const char *dumps[] = {dump, dump};
+        for (size_t count = 1; count <= 2; count++)
+            check_pages(options_for(dumps, count), "", 0);
+        free(dump);
+    }
+}
+
 static void long_lists_are_one_line(void **state)
 {
     (void)state;
@@ -330,6 +345,7 @@ int main(void)
         cmocka_unit_test(directories_and_lists_stand_for_their_files),
         cmocka_unit_test(takedowns_are_as_if_they_had_never_been),
         cmocka_unit_test(odd_lines_lose_nothing_else),
+        cmocka_unit_test(dumps_of_nothing_make_a_store_of_nothing),
         cmocka_unit_test(long_lists_are_one_line),
         cmocka_unit_test(one_line_that_follows_is_enough),
     };
