@@ -1,5 +1,6 @@
 /* windrow: the program. Finds the command and hands it its arguments. */
 #include "command.h"
+#include "fault.h"
 
 #include <stdlib.h>
 #include <string.h>
@@ -79,6 +80,7 @@ static char *list_commands(int key, const char *text, void *input)
 
 int main(int argc, char **argv)
 {
+    fault_watch();
     const struct command *command = NULL;
     const struct argp program = {.parser = parse_option, .args_doc = "COMMAND [ARGUMENT...]", .help_filter = list_commands,
                                  .doc = "Link-based scores for every page of a crawl that is larger than memory."

@@ -1,7 +1,10 @@
 /* Reads a store and all its runs back. */
 #include "base/crew.h"
 #include "rank/run.h"
+#include "store/ledger.h"
 #include "store/store.h"
+
+#include <stdlib.h>
 
 struct verification {
     const struct windrow_store *store;
@@ -20,7 +23,16 @@ static void note_damage(void *context, const char *damage)
 static enum windrow_status verify_run(void *context, const char *name)
 {
     struct verification *verification = context;
-    enum windrow_status status = windrow_run_verify(verification->store, name, note_damage, verification);
+    char *ledger = windrow_path(windrow_store_path(verification->store), "runs/%s/ledger", name);
+    enum windrow_status status = ledger ? windrow_ledger_verify(ledger) : windrow_fail(WINDROW_RESOURCE, "out of memory");
+    free(ledger);
+    if (status == WINDROW_DAMAGED) {
+        note_damage(verification, windrow_message());
+        return WINDROW_OK;
+    }
+    if (status)
+        return status;
+    status = windrow_run_verify(verification->store, name, note_damage, verification);
     return status == WINDROW_NO ? WINDROW_OK : status; /* the other runs are looked at all the same */
 }
 
@@ -41,6 +53,13 @@ enum windrow_status windrow_verify(const char *path, unsigned threads, void (*fo
         status = windrow_run_each(store, verify_run, &verification);
     }
     windrow_store_close(store);
+    char *ledger = windrow_path(path, "ledger");
+    enum windrow_status job = ledger ? windrow_ledger_verify(ledger) : windrow_fail(WINDROW_RESOURCE, "out of memory");
+    free(ledger);
+    if (job == WINDROW_DAMAGED)
+        note_damage(&verification, windrow_message());
+    else if (!status)
+        status = job;
     if (!status && verification.any)
         status = windrow_fail(WINDROW_NO, "%s is damaged", path);
     return status;

@@ -689,6 +689,7 @@ static void raise_file_limit(void)
 
 static enum windrow_status shard(const struct windrow_shard_options *options, bool *already_done)
 {
+    bool fresh = !windrow_file_exists(options->out);
     enum windrow_status status = check_place(options->out);
     if (status)
         return status;
@@ -712,8 +713,10 @@ static enum windrow_status shard(const struct windrow_shard_options *options, bo
     if (!status)
         status = windrow_directory_remove(job.scratch);
 out:;
-    /* Too many malformed fields: nothing of this store is worth keeping. */
-    bool hopeless = status == WINDROW_INPUT && job.reading.hopeless;
+    /* Too many malformed fields: nothing of this store is worth keeping. Nor is there if a first call went wrong before
+     * anything was read, as with a misspelt name: it should not stand in the way of the next one. */
+    bool hopeless = (status == WINDROW_INPUT && job.reading.hopeless) ||
+                    (fresh && (status == WINDROW_INPUT || status == WINDROW_USAGE) && !job.reading.run_count);
     if (hopeless || complete)
         windrow_directory_remove(job.scratch);
     close_job(&job);

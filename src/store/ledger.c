@@ -194,6 +194,36 @@ enum windrow_status windrow_ledger_each(struct windrow_ledger *ledger, const cha
     return status;
 }
 
+static enum windrow_status pass(void *context, const char *key, const void *value, size_t bytes)
+{
+    (void)context;
+    (void)key;
+    (void)value;
+    (void)bytes;
+    return WINDROW_OK;
+}
+
+enum windrow_status windrow_ledger_verify(const char *directory)
+{
+    struct windrow_ledger *ledger = NULL;
+    struct stat facts;
+    char *data = windrow_path(directory, "data.mdb");
+    if (!data)
+        return windrow_fail(WINDROW_RESOURCE, "out of memory for a ledger");
+    enum windrow_status status = WINDROW_OK;
+    if (stat(data, &facts))
+        status = windrow_fail_system(WINDROW_DAMAGED, errno, "cannot look at %s", data);
+    else if (facts.st_size % sysconf(_SC_PAGESIZE))
+        status = windrow_fail(WINDROW_DAMAGED, "%s has %lld bytes, which are not whole pages: it was cut", data, (long long)facts.st_size);
+    if (!status)
+        status = windrow_ledger_open(directory, true, &ledger);
+    if (!status)
+        status = windrow_ledger_each(ledger, "", pass, NULL);
+    windrow_ledger_close(ledger);
+    free(data);
+    return status == WINDROW_NO ? WINDROW_DAMAGED : status;
+}
+
 enum windrow_status windrow_ledger_lock(const char *lock_path, int *descriptor)
 {
     *descriptor = windrow_files.open(lock_path, O_RDWR | O_CREAT, 0666);

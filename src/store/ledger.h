@@ -38,6 +38,10 @@ enum windrow_status windrow_ledger_get(struct windrow_ledger *ledger, const char
 enum windrow_status windrow_ledger_each(struct windrow_ledger *ledger, const char *prefix,
                                         enum windrow_status (*each)(void *context, const char *key, const void *value, size_t bytes), void *context);
 
+/* Reads a ledger back: whole pages, every record right. WINDROW_DAMAGED, also when there is none. LMDB touches its file
+ * as memory, so a file that was cut may end the process with SIGBUS. */
+enum windrow_status windrow_ledger_verify(const char *directory);
+
 /* A lock on a directory's job: held as long as the file descriptor is open, gone when the process dies.
  * WINDROW_RESOURCE: another process holds it. */
 enum windrow_status windrow_ledger_lock(const char *lock_path, int *descriptor);
