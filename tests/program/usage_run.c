@@ -247,10 +247,13 @@ static void test_quiet(void **state)
         assert_string_equal(outcome.err, "");
         outcome_free(&outcome);
     }
-    outcome = WINDROW("shard", "--quiet", "--out", room->absent, "/nowhere/at/all");
+    char *nothing = scratch_path(room->directory, "nothing");
+    outcome = WINDROW("shard", "--quiet", "--out", nothing, "/nowhere/at/all");
     assert_int_equal(outcome.exit_code, 3);
-    assert_true(outcome.err_bytes > 0);                            /* errors are not talk */
+    assert_true(outcome.err_bytes > 0); /* errors are not talk */
+    assert_false(scratch_exists(nothing));
     outcome_free(&outcome);
+    free(nothing);
 }
 
 /* `windrow top | head` is common, and a full device is not success. */
