@@ -250,7 +250,8 @@ enum windrow_status windrow_manifest_write(const char *path, struct windrow_mani
     mdb_env_close(environment);
     environment = NULL;
     manifest->facts.fingerprint = XXH3_64bits_digest(sink.fingerprint);
-    if ((status = windrow_directory_sync(directory)))
+    /* The manifest's name is durable before the seal's is. */
+    if ((status = windrow_directory_sync(directory)) || (status = windrow_directory_sync(path)))
         goto out;
     uint64_t bytes, checksum;
     if ((status = windrow_file_checksum(data, &bytes, &checksum)))

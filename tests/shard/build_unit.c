@@ -11,6 +11,7 @@
 #include "../common/memory.h"
 #include "../common/scratch.h"
 
+#include <errno.h>
 #include <setjmp.h>
 #include <stdarg.h>
 #include <stdio.h>
@@ -454,11 +455,13 @@ static void stop_soon(void *context, const struct windrow_progress *progress)
         atomic_store(&stopper->stop, true);
 }
 
-/* Stops the job at ever new moments until it is through. */
+/* Stops the job at ever new moments until it is through; it is gone on with by another number of threads. */
 static unsigned shard_in_steps(struct windrow_shard_options options, struct dice *dice)
 {
     for (unsigned stops = 0;; stops++) {
         struct stopper stopper = {.calls_left = dice_below(dice, 3 + stops)};
+        options.threads = 1 + dice_below(dice, 3);
+        options.memory_bytes = (UINT64_C(64) + dice_below(dice, 100)) << 20;
         options.watch = (struct windrow_watch){.listener = stop_soon, .context = &stopper, .stop = &stopper.stop};
         enum windrow_status status = windrow_shard(&options, NULL);
         if (status == WINDROW_OK)
@@ -508,6 +511,78 @@ static void test_random_dumps(void **state)
         free(model);
     }
     assert_true(stops > ROUNDS / 2);
+}
+
+/* ---- A system that fails ---- */
+
+/* No test here pulls the plug, and a sync is what they would wait for most. */
+static int no_sync(int descriptor)
+{
+    (void)descriptor;
+    return 0;
+}
+
+static struct windrow_file_functions honest;
+static int64_t calls_left; /* until one fails */
+
+static bool fails(void)
+{
+    if (calls_left-- != 0)
+        return false;
+    errno = ENOSPC;
+    return true;
+}
+
+static int open_or_fail(const char *path, int flags, mode_t mode) { return fails() ? -1 : honest.open(path, flags, mode); }
+static ssize_t write_or_fail(int descriptor, const void *bytes, size_t count) { return fails() ? -1 : honest.write(descriptor, bytes, count); }
+static int sync_or_fail(int descriptor) { (void)descriptor; return fails() ? -1 : 0; }
+static int rename_or_fail(const char *from, const char *to) { return fails() ? -1 : honest.rename(from, to); }
+static ssize_t read_at_or_fail(int descriptor, void *bytes, size_t count, off_t offset) { return fails() ? -1 : honest.read_at(descriptor, bytes, count, offset); }
+
+static enum windrow_status shard_failing(const struct windrow_shard_options *options, int64_t call)
+{
+    honest = windrow_files;
+    windrow_files.open = open_or_fail;
+    windrow_files.write = write_or_fail;
+    windrow_files.sync = windrow_files.sync_data = sync_or_fail;
+    windrow_files.rename = rename_or_fail;
+    windrow_files.read_at = read_at_or_fail;
+    calls_left = call;
+    enum windrow_status status = windrow_shard(options, NULL);
+    windrow_files = honest;
+    return status;
+}
+
+/* Whichever call finds the disk full, the job says so and, run again, comes to the same store. */
+static void test_full_disk(void **state)
+{
+    (void)state;
+    enum { TRIES = 60 };
+    struct dice dice = {77};
+    struct model *model = memory_array(1, sizeof *model);
+    struct dumps dumps = {0};
+    dumps_make(&dice, model, &dumps);
+    char *store = scratch_path(dumps.directory, "store"), *other = scratch_path(dumps.directory, "other");
+    struct windrow_shard_options options = options_for(&dumps, store);
+    int64_t all = INT64_MAX;
+    assert_int_equal(shard_failing(&options, all), WINDROW_OK);
+    all -= calls_left;
+    assert_true(all > 30);
+    options.out = other;
+    for (int64_t number = 0; number < TRIES; number++) {
+        int64_t call = all * number / TRIES;
+        enum windrow_status status = shard_failing(&options, call);
+        if (status != WINDROW_RESOURCE)
+            fail_msg("call %d of %d fails, and shard ends with %d: %s", (int)call, (int)all, (int)status, status ? windrow_message() : "");
+        assert_non_null(strstr(windrow_message(), strerror(ENOSPC)));
+        must_shard(&options);
+        assert_int_equal(fingerprint_of(store), fingerprint_of(other));
+        assert_int_equal(windrow_directory_remove(other), WINDROW_OK);
+    }
+    free(store);
+    free(other);
+    dumps_free(&dumps);
+    free(model);
 }
 
 /* ---- Particular dumps ---- */
@@ -691,13 +766,6 @@ static void test_segments(void **state)
     dumps_free(&dumps);
 }
 
-/* No test here pulls the plug, and a sync is what they would wait for most. */
-static int no_sync(int descriptor)
-{
-    (void)descriptor;
-    return 0;
-}
-
 int main(void)
 {
     windrow_files.sync = windrow_files.sync_data = no_sync;
@@ -705,6 +773,7 @@ int main(void)
         cmocka_unit_test(test_page_alone),
         cmocka_unit_test(test_malformed_lines_only),
         cmocka_unit_test(test_random_dumps),
+        cmocka_unit_test(test_full_disk),
         cmocka_unit_test(test_star),
         cmocka_unit_test(test_segments),
         cmocka_unit_test(test_empty_dump),
