@@ -36,7 +36,7 @@
  *
  * A stage's input is removed once the stage is through. The seal makes the store a store. */
 
-#define MEMORY_LEAST (UINT64_C(32) << 20)
+#define MEMORY_LEAST (UINT64_C(48) << 20) /* merging a single batch takes 37 MiB */
 #define MEMORY_OWN (UINT64_C(12) << 20) /* what the process takes before any data */
 
 struct job {

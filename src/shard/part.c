@@ -217,7 +217,7 @@ static enum windrow_status merge(struct tournament *tournament, const uint8_t *h
     if (!meeting)
         return path_memory();
     tournament->winner = play(tournament, 1);
-    for (;;) {
+    while (tournament->winner != UINT64_MAX) { /* nobody: there is no run at all */
         struct entrant *first = &tournament->entrants[tournament->winner];
         if (first->reader.ended)
             break;
