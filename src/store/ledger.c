@@ -6,6 +6,7 @@
 #include <stdlib.h>
 #include <string.h>
 #include <sys/file.h>
+#include <sys/stat.h>
 #include <unistd.h>
 #include <xxhash.h>
 
@@ -34,7 +35,9 @@ enum windrow_status windrow_ledger_open(const char *directory, bool only_read, s
     char *data = windrow_path(directory, "data.mdb");
     if (!data)
         return windrow_fail(WINDROW_RESOURCE, "out of memory for a ledger");
-    bool exists = windrow_file_exists(data);
+    /* An empty file is one that a writer was about to begin: readers find nothing there, the next writer begins. */
+    struct stat facts;
+    bool exists = stat(data, &facts) == 0 && facts.st_size > 0;
     free(data);
     if (only_read && !exists)
         return windrow_fail(WINDROW_NO, "there is no ledger in %s", directory);

@@ -65,6 +65,24 @@ static void test_records(void **state)
     scratch_remove(directory);
 }
 
+/* A writer that was killed before its first byte has left a file of none. */
+static void test_begun_file(void **state)
+{
+    (void)state;
+    char *directory = scratch_make(), *data = scratch_path(directory, "data.mdb"), found;
+    struct windrow_ledger *ledger;
+    scratch_write_text(data, "");
+    assert_int_equal(windrow_ledger_open(directory, true, &ledger), WINDROW_NO);
+    ledger = open_ledger(directory, false);
+    assert_int_equal(commit_text(ledger, "a", "1"), WINDROW_OK);
+    windrow_ledger_close(ledger);
+    ledger = open_ledger(directory, true);
+    assert_int_equal(windrow_ledger_get(ledger, "a", &found, 1), WINDROW_OK);
+    windrow_ledger_close(ledger);
+    free(data);
+    scratch_remove(directory);
+}
+
 struct seen {
     char keys[200];
     unsigned left;
@@ -208,7 +226,7 @@ static void test_lock(void **state)
 int main(void)
 {
     const struct CMUnitTest tests[] = {
-        cmocka_unit_test(test_records), cmocka_unit_test(test_each), cmocka_unit_test(test_damaged_record),
+        cmocka_unit_test(test_records), cmocka_unit_test(test_each), cmocka_unit_test(test_damaged_record), cmocka_unit_test(test_begun_file),
         cmocka_unit_test(test_killed),  cmocka_unit_test(test_lock),
     };
     return cmocka_run_group_tests_name("ledger", tests, NULL, NULL);
