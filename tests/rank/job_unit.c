@@ -158,7 +158,7 @@ static void a_stopped_run_goes_on_to_the_same_bytes(void **state)
     struct dice dice = {32};
     unsigned stops = 0;
     for (int round = 0; round < 6; round++) {
-        char name[16];
+        char name[32];
         snprintf(name, sizeof name, "stopped-%d", round);
         for (int session = 0;; session++) {
             struct stopper stopper = {.calls_left = dice_below(&dice, 25)};
