@@ -57,13 +57,26 @@ uint64_t windrow_frames_offset(const struct windrow_frames_writer *frames)
     return frames->writer.written_bytes;
 }
 
-enum windrow_status windrow_frames_writer_finish(struct windrow_frames_writer *frames)
+static enum windrow_status end(struct windrow_frames_writer *frames, bool durable)
 {
+    static const uint32_t nothing[2];
     enum windrow_status status = windrow_frames_cut(frames);
     if (!status)
-        status = windrow_writer_finish(&frames->writer, NULL);
+        status = windrow_writer_append(&frames->writer, nothing, HEADER_BYTES);
+    if (!status)
+        status = durable ? windrow_writer_finish(&frames->writer, NULL) : windrow_writer_close(&frames->writer);
     windrow_frames_writer_abandon(frames);
     return status;
+}
+
+enum windrow_status windrow_frames_writer_finish(struct windrow_frames_writer *frames)
+{
+    return end(frames, true);
+}
+
+enum windrow_status windrow_frames_writer_close(struct windrow_frames_writer *frames)
+{
+    return end(frames, false);
 }
 
 void windrow_frames_writer_abandon(struct windrow_frames_writer *frames)
@@ -115,9 +128,9 @@ enum windrow_status windrow_frames_next(struct windrow_frames_reader *frames)
     while (got < 0 && errno == EINTR);
     if (got < 0)
         return windrow_fail_system(WINDROW_DAMAGED, errno, "cannot read %s", frames->path);
-    if (got == 0)
+    if (got == HEADER_BYTES && !header[0] && !header[1])
         return WINDROW_OK;
-    if (got != HEADER_BYTES || header[0] > FRAME_BYTES_MOST || header[1] > ZSTD_compressBound(FRAME_BYTES_MOST))
+    if (got != HEADER_BYTES || !header[0] || header[0] > FRAME_BYTES_MOST || header[1] > ZSTD_compressBound(FRAME_BYTES_MOST))
         return windrow_frames_damaged(frames);
     frames->compressed.bytes = 0;
     enum windrow_status status = windrow_buffer_reserve(&frames->compressed, header[1]);

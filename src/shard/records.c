@@ -45,9 +45,7 @@ enum windrow_status windrow_records_put(struct windrow_records_writer *records, 
 
 enum windrow_status windrow_records_writer_finish(struct windrow_records_writer *records, bool durable)
 {
-    enum windrow_status status = windrow_frames_cut(&records->frames);
-    if (!status)
-        status = durable ? windrow_writer_finish(&records->frames.writer, NULL) : windrow_writer_close(&records->frames.writer);
+    enum windrow_status status = durable ? windrow_frames_writer_finish(&records->frames) : windrow_frames_writer_close(&records->frames);
     windrow_records_writer_abandon(records);
     return status;
 }

@@ -268,11 +268,25 @@ static void test_damage(void **state)
             fail_msg("byte %zu of %zu is damaged, and reading ends with %d", at, bytes, (int)status);
         scratch_write(path, good, bytes);
         scratch_cut(path, at);
-        if (at && read_links(path, &sum) != WINDROW_DAMAGED)
+        if (read_links(path, &sum) != WINDROW_DAMAGED)
             fail_msg("cut to %zu of %zu bytes, and nobody notices", at, bytes);
         scratch_write(path, good, bytes);
     }
     free(good);
+    lists_free(lists, 60);
+    /* Cut just between two frames, where what is left is good in itself. */
+    uint64_t border = 0;
+    lists = lists_make(&dice, 60, true);
+    assert_int_equal(windrow_linkrun_writer_open(&writer, path), WINDROW_OK);
+    for (size_t index = 0; index < 60; index++) {
+        if (index == 30)
+            assert_int_equal(windrow_linkrun_cut(&writer), WINDROW_OK);
+        border = index == 30 ? windrow_frames_offset(&writer.frames) : border;
+        put_list(&writer, &lists[index], true);
+    }
+    assert_int_equal(windrow_linkrun_writer_finish(&writer), WINDROW_OK);
+    scratch_cut(path, (size_t)border);
+    assert_int_equal(read_links(path, &sum), WINDROW_DAMAGED);
     lists_free(lists, 60);
     free(path);
     scratch_remove(directory);
