@@ -176,6 +176,12 @@ enum windrow_status windrow_writer_sync(struct windrow_writer *writer)
     return status;
 }
 
+enum windrow_status windrow_writer_seal(struct windrow_writer *writer)
+{
+    uint64_t digest = XXH3_64bits_digest(writer->checksum);
+    return windrow_writer_append(writer, &digest, sizeof digest);
+}
+
 static enum windrow_status writer_end(struct windrow_writer *writer, enum windrow_status status)
 {
     if (windrow_files.close(writer->descriptor) && !status)

@@ -71,6 +71,8 @@ enum windrow_status windrow_writer_reopen(struct windrow_writer *writer, const c
 enum windrow_status windrow_writer_append(struct windrow_writer *writer, const void *data, size_t bytes);
 /* Flushes and syncs the data, leaving the writer open: the bytes so far are durable. */
 enum windrow_status windrow_writer_sync(struct windrow_writer *writer);
+/* Appends the XXH3-64 of everything written so far, 8 bytes, to a file that was opened with_checksum. */
+enum windrow_status windrow_writer_seal(struct windrow_writer *writer);
 /* Flushes, syncs and closes; `checksum` (may be NULL) receives the XXH3-64 when it was asked for. */
 enum windrow_status windrow_writer_finish(struct windrow_writer *writer, uint64_t *checksum);
 /* Flushes and closes without a sync: for scratch that no ledger names. */

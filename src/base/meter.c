@@ -48,6 +48,13 @@ static void call(struct windrow_meter *meter, double time, bool ended)
     meter->watch.listener(meter->watch.context, &progress);
 }
 
+void windrow_meter_left(struct windrow_meter *meter, double seconds)
+{
+    pthread_mutex_lock(&meter->lock);
+    meter->now.seconds_left = seconds;
+    pthread_mutex_unlock(&meter->lock);
+}
+
 void windrow_meter_add(struct windrow_meter *meter, uint64_t units)
 {
     atomic_fetch_add(&meter->done, units);

@@ -25,6 +25,8 @@ void windrow_meter_start(struct windrow_meter *meter, const struct windrow_watch
 void windrow_meter_finish(struct windrow_meter *meter);
 /* Begins a stage of `total` units (0: unknown); strings must outlive the stage. */
 void windrow_meter_stage(struct windrow_meter *meter, const char *stage, const char *unit, uint64_t total);
+/* Says how long the whole job will still take, from any thread; negative: unknown. */
+void windrow_meter_left(struct windrow_meter *meter, double seconds);
 /* Counts units; may call the listener. */
 void windrow_meter_add(struct windrow_meter *meter, uint64_t units);
 void windrow_meter_stage_end(struct windrow_meter *meter);

@@ -36,6 +36,8 @@ struct origin {
  * remembers where, and spares them the large one. */
 #define RECENT 8192
 
+#define SLOTS_FIRST ((size_t)1 << 16)
+
 struct windrow_batch {
     uint64_t memory_bytes;
     const struct windrow_fold *fold;
@@ -51,6 +53,7 @@ struct windrow_batch {
     size_t page_count, page_capacity;
     struct slot *slots;
     size_t slot_count;         /* a power of two */
+    size_t slots_planned;      /* more only for a single line that holds very many pages */
     size_t page_limit;         /* the slots' fill limit */
     uint32_t *lines;
     size_t line_words, line_capacity;
@@ -140,10 +143,12 @@ enum windrow_status windrow_batch_create(uint64_t memory_bytes, const struct win
     batch->memory_bytes = memory_bytes;
     batch->fold = windrow_fold_needed(fold) ? fold : NULL;
     batch->open_line = SIZE_MAX;
-    /* A page takes some 200 bytes with its links and sorting: slots for twice as many. */
-    batch->slot_count = 1024;
-    while (batch->slot_count * 160 < memory_bytes && batch->slot_count < ((size_t)1 << 31))
-        batch->slot_count *= 2;
+    /* A page takes some 200 bytes with its links and sorting: slots for twice as many, in the end. A small crawl
+     * never gets there. */
+    batch->slots_planned = 1024;
+    while (batch->slots_planned * 160 < memory_bytes && batch->slots_planned < ((size_t)1 << 31))
+        batch->slots_planned *= 2;
+    batch->slot_count = batch->slots_planned < SLOTS_FIRST ? batch->slots_planned : SLOTS_FIRST;
     batch->page_limit = batch->slot_count / 4 * 3;
     batch->slots = table(batch->slot_count);
     batch->recent = calloc(RECENT, sizeof *batch->recent);
@@ -172,7 +177,8 @@ void windrow_batch_destroy(struct windrow_batch *batch)
 
 bool windrow_batch_full(const struct windrow_batch *batch)
 {
-    return memory_in_use(batch) >= batch->memory_bytes || batch->page_count + pages_to_come(batch) >= batch->page_limit - batch->slot_count / 16;
+    return memory_in_use(batch) >= batch->memory_bytes ||
+           batch->page_count + pages_to_come(batch) >= batch->slots_planned / 4 * 3 - batch->slots_planned / 16;
 }
 
 bool windrow_batch_empty(const struct windrow_batch *batch)
@@ -198,7 +204,6 @@ static enum windrow_status grow(void *array, size_t *capacity, size_t wanted, si
 
 static enum windrow_status rehash(struct windrow_batch *batch)
 {
-    /* Only when a single line holds more pages than the batch was planned for. */
     size_t count = batch->slot_count * 2;
     struct slot *slots = table(count);
     if (!slots)

@@ -180,7 +180,7 @@ static enum windrow_status next_chunk(struct counter *counter, struct worker *wo
         }
         double progress = windrow_places_progress(options->places), elapsed = windrow_seconds() - options->meter->stage_began;
         if (progress > 0)
-            options->meter->now.seconds_left = elapsed * fmax(1 - progress, 0) / progress;
+            windrow_meter_left(options->meter, elapsed * fmax(1 - progress, 0) / progress);
     }
     pthread_mutex_unlock(&counter->lock);
     return status;

@@ -1,6 +1,7 @@
 #include "shard/keyrun.h"
 
 #include "base/varint.h"
+#include "shard/sealed.h"
 #include "url/key.h"
 
 #include <stdio.h>
@@ -60,9 +61,11 @@ enum windrow_status windrow_keyrun_writer_finish(struct windrow_keyrun_writer *r
     struct windrow_writer writer = {.descriptor = -1};
     enum windrow_status status = windrow_frames_writer_finish(&run->frames);
     if (!status)
-        status = windrow_writer_open(&writer, run->index_path, false);
+        status = windrow_writer_open(&writer, run->index_path, true);
     if (!status)
         status = windrow_writer_append(&writer, run->index.data, run->index.bytes);
+    if (!status)
+        status = windrow_writer_seal(&writer);
     if (!status)
         status = windrow_writer_finish(&writer, NULL);
     windrow_writer_abandon(&writer);
@@ -84,9 +87,7 @@ enum windrow_status windrow_keyrun_index_load(const char *run_path, struct windr
     char *path = NULL;
     if (asprintf(&path, "%s.index", run_path) < 0)
         return windrow_fail(WINDROW_RESOURCE, "out of memory while opening %s", run_path);
-    enum windrow_status status = windrow_file_load(path, SIZE_MAX / 2, &index->bytes);
-    if (status == WINDROW_NO)
-        status = WINDROW_DAMAGED;
+    enum windrow_status status = windrow_sealed_load(path, &index->bytes);
     const uint8_t *at = index->bytes.data, *end = at + index->bytes.bytes;
     size_t capacity = 0;
     while (!status && at < end) {

@@ -20,7 +20,8 @@ struct windrow_keyrun_writer {
 };
 
 enum windrow_status windrow_keyrun_writer_open(struct windrow_keyrun_writer *run, const char *path);
-/* `shared` is the length of the prefix that key and the key before share, which callers know anyway. */
+/* `shared` is exactly the length of the prefix that key and the key before share, which callers know anyway: the page merge
+ * compares by it. */
 enum windrow_status windrow_keyrun_put(struct windrow_keyrun_writer *run, const uint8_t *key, size_t key_bytes, size_t shared,
                                        uint64_t degree, bool crawled);
 /* Syncs and closes run and index. */

@@ -3,6 +3,7 @@
 #include "shard/cutter.h"
 #include "shard/linkrun.h"
 #include "shard/remap.h"
+#include "shard/sealed.h"
 
 #include <errno.h>
 #include <fcntl.h>
@@ -301,7 +302,7 @@ static enum windrow_status write_head(struct merging *merging)
     if (!status)
         status = windrow_buffer_append(&bytes, merging->inside, merging->head.core_pages * sizeof *merging->inside);
     if (!status)
-        status = windrow_file_replace(path, bytes.data, bytes.bytes);
+        status = windrow_sealed_replace(path, bytes.data, bytes.bytes);
     windrow_buffer_free(&bytes);
     free(path);
     return status;
@@ -340,7 +341,7 @@ enum windrow_status windrow_linkmerge_segment(const struct windrow_linkmerge *me
         if (status)
             goto out;
     }
-    if ((status = windrow_writer_open(&merging.corrections, corrections_path, false)) || (status = open_runs(&merging)) ||
+    if ((status = windrow_writer_open(&merging.corrections, corrections_path, true)) || (status = open_runs(&merging)) ||
         (status = merge_pages(&merging)))
         goto out;
     for (int kind = 0; kind < WINDROW_BLOCK_KINDS; kind++) {
@@ -349,7 +350,7 @@ enum windrow_status windrow_linkmerge_segment(const struct windrow_linkmerge *me
             goto out;
         merging.head.block_counts[kind] = cutter->records.bytes / sizeof(struct windrow_block_record);
     }
-    if ((status = windrow_writer_finish(&merging.corrections, NULL)))
+    if ((status = windrow_writer_seal(&merging.corrections)) || (status = windrow_writer_finish(&merging.corrections, NULL)))
         goto out;
     status = write_head(&merging);
 out:
@@ -377,9 +378,7 @@ static enum windrow_status load(const char *scratch, uint64_t segment, struct wi
     char *path = windrow_path(scratch, "segment-%06llu.links", (unsigned long long)segment);
     if (!path)
         return memory();
-    enum windrow_status status = windrow_file_load(path, SIZE_MAX / 2, bytes);
-    if (status == WINDROW_NO)
-        status = WINDROW_DAMAGED;
+    enum windrow_status status = windrow_sealed_load(path, bytes);
     if (!status) {
         bool good = bytes->bytes >= sizeof *head;
         if (good)
@@ -413,11 +412,12 @@ static enum windrow_status apply_corrections(const struct windrow_linkmerge *mer
     enum windrow_status status = WINDROW_OK;
     for (uint64_t segment = 0; !status && segment < merge->segment_count; segment++) {
         char *path = windrow_path(merge->scratch, "segment-%06llu.corrections", (unsigned long long)segment);
-        int descriptor = path ? windrow_files.open(path, O_RDONLY, 0) : -1;
-        struct stat facts;
-        if (descriptor < 0 || fstat(descriptor, &facts))
-            status = windrow_fail_system(WINDROW_DAMAGED, errno, "cannot open the scratch file %s", path ? path : "of corrections");
-        uint64_t count = status ? 0 : (uint64_t)facts.st_size / sizeof *block;
+        uint64_t content_bytes = 0;
+        status = path ? windrow_sealed_check(path, &content_bytes) : memory();
+        int descriptor = status ? -1 : windrow_files.open(path, O_RDONLY, 0);
+        if (!status && descriptor < 0)
+            status = windrow_fail_system(WINDROW_DAMAGED, errno, "cannot open the scratch file %s", path);
+        uint64_t count = content_bytes / sizeof *block;
         for (uint64_t at = 0; !status && at < count; at += 65536) {
             size_t part = count - at < 65536 ? (size_t)(count - at) : 65536;
             status = windrow_file_read_at(descriptor, path, block, part * sizeof *block, at * sizeof *block);
@@ -474,6 +474,9 @@ enum windrow_status windrow_linkmerge_degrees(const struct windrow_linkmerge *me
         status = memory();
         goto out;
     }
+    uint64_t raw_bytes;
+    if ((status = windrow_sealed_check(raw_path, &raw_bytes)))
+        goto out;
     if ((raw = windrow_files.open(raw_path, O_RDONLY, 0)) < 0) {
         status = windrow_fail_system(WINDROW_DAMAGED, errno, "cannot open the scratch file %s", raw_path);
         goto out;

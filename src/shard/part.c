@@ -1,6 +1,7 @@
 #include "shard/part.h"
 
 #include "base/varint.h"
+#include "shard/sealed.h"
 
 #include <stdlib.h>
 #include <string.h>
@@ -324,7 +325,7 @@ enum windrow_status windrow_part_merge(const char *scratch, uint64_t run_count, 
         status = windrow_buffer_append(&record, offsets, offsets_bytes);
     free(offsets);
     if (!status)
-        status = windrow_file_replace(facts_path, record.data, record.bytes);
+        status = windrow_sealed_replace(facts_path, record.data, record.bytes);
 out:
     if (tournament.entrants)
         for (uint64_t run = 0; run < run_count; run++) {
@@ -346,9 +347,7 @@ static enum windrow_status facts_read(const char *scratch, uint64_t part, struct
     char *path = windrow_path(scratch, "part-%06llu.facts", (unsigned long long)part);
     if (!path)
         return path_memory();
-    enum windrow_status status = windrow_file_load(path, SIZE_MAX / 2, record);
-    if (status == WINDROW_NO)
-        status = WINDROW_DAMAGED;
+    enum windrow_status status = windrow_sealed_load(path, record);
     if (!status) {
         if (record->bytes >= sizeof *facts)
             memcpy(facts, record->data, sizeof *facts);

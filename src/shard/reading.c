@@ -221,7 +221,7 @@ static enum windrow_status next_chunk(struct reader *reader, struct worker *work
         windrow_dump_progress(reader->dump, &consumed, &total);
         double elapsed = windrow_seconds() - reader->reading->meter->stage_began;
         if (total && consumed)
-            reader->reading->meter->now.seconds_left = elapsed * (double)(total - consumed) / (double)consumed;
+            windrow_meter_left(reader->reading->meter, elapsed * (double)(total - consumed) / (double)consumed);
     }
     pthread_mutex_unlock(&reader->lock);
     return status;

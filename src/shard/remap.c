@@ -2,6 +2,7 @@
 
 #include "shard/linkrun.h"
 #include "shard/part.h"
+#include "shard/sealed.h"
 #include "store/layout.h"
 
 #include <stdlib.h>
@@ -64,7 +65,7 @@ enum windrow_status windrow_remap_run(const struct windrow_remap_parts *parts, u
         (status = windrow_linkrun_reader_open(&in, in_path)) || (status = windrow_linkrun_writer_open(&out, out_path)) ||
         (status = rewrite(&in, &out, pages, cores, local_pages, &marks)) || (status = windrow_linkrun_writer_finish(&out)))
         goto out;
-    status = windrow_file_replace(index_path, marks.data, marks.bytes);
+    status = windrow_sealed_replace(index_path, marks.data, marks.bytes);
 out:
     windrow_linkrun_reader_close(&in);
     windrow_linkrun_writer_abandon(&out);
@@ -84,9 +85,7 @@ enum windrow_status windrow_remap_segment(const char *scratch, uint64_t run, uin
     if (!path)
         return memory();
     struct windrow_buffer marks = {0};
-    enum windrow_status status = windrow_file_load(path, SIZE_MAX / 2, &marks);
-    if (status == WINDROW_NO)
-        status = WINDROW_DAMAGED;
+    enum windrow_status status = windrow_sealed_load(path, &marks);
     size_t count = marks.bytes / sizeof(struct windrow_remap_mark);
     const struct windrow_remap_mark *mark = (const struct windrow_remap_mark *)marks.data;
     for (size_t index = 0; !status && index + 1 < count; index++)

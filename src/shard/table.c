@@ -1,6 +1,7 @@
 #include "shard/table.h"
 
 #include "shard/keyrun.h"
+#include "shard/sealed.h"
 #include "store/layout.h"
 #include "store/pages.h"
 #include "url/domain.h"
@@ -146,7 +147,7 @@ static enum windrow_status add_page(struct segment *segment, uint64_t page, cons
 static enum windrow_status write_table(const char *path, struct segment *segment)
 {
     struct windrow_writer writer = {.descriptor = -1};
-    enum windrow_status status = windrow_writer_open(&writer, path, false);
+    enum windrow_status status = windrow_writer_open(&writer, path, true);
     segment->head.mark_count = segment->pages.marks.bytes / sizeof(struct windrow_pages_mark);
     segment->head.first_key_bytes = segment->pages.first_keys.bytes;
     segment->head.host_name_bytes = segment->host_names.bytes;
@@ -156,6 +157,8 @@ static enum windrow_status write_table(const char *path, struct segment *segment
                                             &segment->host_names,  &segment->groups,           &segment->degrees};
     for (size_t part = 0; !status && part < sizeof parts / sizeof *parts; part++)
         status = windrow_writer_append(&writer, parts[part]->data, parts[part]->bytes);
+    if (!status)
+        status = windrow_writer_seal(&writer);
     if (!status)
         status = windrow_writer_finish(&writer, NULL);
     windrow_writer_abandon(&writer);
@@ -223,9 +226,7 @@ static enum windrow_status load_table(const char *scratch, uint64_t segment, str
     char *path = windrow_path(scratch, "segment-%06llu.table", (unsigned long long)segment);
     if (!path)
         return memory();
-    enum windrow_status status = windrow_file_load(path, SIZE_MAX / 2, bytes);
-    if (status == WINDROW_NO)
-        status = WINDROW_DAMAGED;
+    enum windrow_status status = windrow_sealed_load(path, bytes);
     if (!status) {
         bool good = bytes->bytes >= sizeof *head;
         if (good)
@@ -287,7 +288,7 @@ enum windrow_status windrow_table_assemble(const char *scratch, const char *stor
         out[output] = (struct windrow_writer){.descriptor = -1};
     for (int output = 0; !status && output < OUTPUTS; output++) {
         char *path = windrow_path(output == DEGREES ? scratch : store, "%s", names[output]);
-        status = path ? windrow_writer_open(&out[output], path, false) : memory();
+        status = path ? windrow_writer_open(&out[output], path, output == DEGREES) : memory();
         free(path);
     }
     for (uint64_t segment = 0; !status && segment < segment_count; segment++) {
@@ -315,6 +316,8 @@ enum windrow_status windrow_table_assemble(const char *scratch, const char *stor
         struct windrow_core_group group = {.rank = totals->core_pages};
         status = windrow_writer_append(&out[CORE], &group, sizeof group);
     }
+    if (!status)
+        status = windrow_writer_seal(&out[DEGREES]);
     for (int output = 0; output < OUTPUTS; output++) {
         if (!status)
             status = windrow_writer_finish(&out[output], NULL);
