@@ -295,6 +295,23 @@ struct windrow_standing {
  * WINDROW_NO: there is no such run; WINDROW_DAMAGED. */
 enum windrow_status windrow_standing_read(const char *store, const char *run, struct windrow_standing *standing);
 
+/* What the parts of a store take, by file size. Times 8 over the links: bits a link. */
+struct windrow_store_sizes {
+    uint64_t page_bytes;        /* frames of the page table */
+    uint64_t page_index_bytes;  /* the page table's index and first keys */
+    uint64_t host_bytes;        /* host table and names */
+    uint64_t core_map_bytes;
+    uint64_t core_link_bytes;   /* blocks of core pages */
+    uint64_t rim_link_bytes;    /* blocks of dangling pages */
+    uint64_t degree_bytes;      /* out-degrees and inside degrees */
+    uint64_t alias_bytes;       /* table of folded URLs, 0 when there is none */
+    uint64_t manifest_bytes;    /* with its seal */
+    uint64_t all_bytes;         /* the sum of the above */
+};
+
+/* Tells what the parts of a finished store take. WINDROW_USAGE (no store), WINDROW_NO (not finished), WINDROW_DAMAGED. */
+enum windrow_status windrow_sizes_read(const char *store, struct windrow_store_sizes *sizes, uint64_t *links);
+
 /* Reads a store and all its runs back against checksums, counts and invariants. Calls `found` (never two
  * calls at once) with a line for each damage; WINDROW_NO when there was any, or when the store is not
  * finished. `threads`: 0 for as many as there are processors. WINDROW_USAGE: no store. */

@@ -64,3 +64,15 @@ enum windrow_status windrow_verify(const char *path, unsigned threads, void (*fo
         status = windrow_fail(WINDROW_NO, "%s is damaged", path);
     return status;
 }
+
+enum windrow_status windrow_sizes_read(const char *path, struct windrow_store_sizes *sizes, uint64_t *links)
+{
+    struct windrow_store *store = NULL;
+    enum windrow_status status = windrow_store_open(path, &store);
+    if (status)
+        return status;
+    *links = windrow_store_facts(store)->links;
+    status = windrow_store_sizes(store, sizes);
+    windrow_store_close(store);
+    return status;
+}

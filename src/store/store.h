@@ -84,20 +84,6 @@ enum windrow_status windrow_page_reader_url(struct windrow_page_reader *reader, 
 enum windrow_status windrow_page_reader_find(struct windrow_page_reader *reader, const char *url, size_t url_bytes,
                                              uint64_t *page, bool *folded);
 
-/* What the parts of a store take, by file size. Times 8 over the links: bits a link. */
-struct windrow_store_sizes {
-    uint64_t page_bytes;        /* frames of the page table */
-    uint64_t page_index_bytes;  /* the page table's index and first keys */
-    uint64_t host_bytes;        /* host table and names */
-    uint64_t core_map_bytes;
-    uint64_t core_link_bytes;   /* blocks of core pages */
-    uint64_t rim_link_bytes;    /* blocks of dangling pages */
-    uint64_t degree_bytes;      /* out-degrees and inside degrees */
-    uint64_t alias_bytes;       /* table of folded URLs, 0 when there is none */
-    uint64_t manifest_bytes;    /* with its seal */
-    uint64_t all_bytes;         /* the sum of the above */
-};
-
 /* WINDROW_DAMAGED when a file of the manifest cannot be looked at. */
 enum windrow_status windrow_store_sizes(const struct windrow_store *store, struct windrow_store_sizes *sizes);
 
