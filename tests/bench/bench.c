@@ -7,6 +7,7 @@
 #include <stdlib.h>
 #include <string.h>
 #include <sys/mman.h>
+#include <sys/resource.h>
 
 void bench_expect(enum windrow_status status, const char *what)
 {
@@ -117,6 +118,13 @@ double bench_times_least(const struct bench_times *times)
         if (times->seconds[i] < least)
             least = times->seconds[i];
     return least;
+}
+
+double bench_cpu_seconds(void)
+{
+    struct rusage usage;
+    getrusage(RUSAGE_SELF, &usage);
+    return (double)(usage.ru_utime.tv_sec + usage.ru_stime.tv_sec) + (double)(usage.ru_utime.tv_usec + usage.ru_stime.tv_usec) * 1e-6;
 }
 
 void bench_peak_forget(void)

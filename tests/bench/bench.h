@@ -51,6 +51,9 @@ void bench_times_add(struct bench_times *times, double seconds);
 double bench_times_median(const struct bench_times *times);
 double bench_times_least(const struct bench_times *times);
 
+/* CPU seconds of this process so far, user and system. */
+double bench_cpu_seconds(void);
+
 /* Forgets the process's peak of resident memory, so that bench_peak_bytes() tells of what follows. */
 void bench_peak_forget(void);
 /* The peak since then, from /proc/self/status. */

@@ -2,9 +2,10 @@
  *
  *     solver_bench ERROR BETA[,BETA…] STORE…
  *
- * For each store and damping: plain power iteration over all links, the solver as `windrow rank` uses it,
- * and with each of its devices switched off. Visits count certifying passes and passes inside hosts. The
- * geometric mean over the stores comes last when there are several.
+ * For each store and damping a line: passes of plain power iteration over all links; then, for the solver as
+ * `windrow rank` uses it and with its devices switched off, the share of links visited (certifying passes and
+ * passes inside hosts counted) and all passes over the core. A * tells that the guard switched
+ * something off, a ! that nothing was proven. The geometric mean over the stores comes last when there are several.
  */
 #include "bench.h"
 
@@ -26,22 +27,21 @@ struct variant {
 };
 
 static const struct variant variants[] = {
-    {"power iteration, all links", WINDROW_METHOD_POWER, false, false, false},
+    {"power", WINDROW_METHOD_POWER, false, false, false},
     {"as rank does", WINDROW_METHOD_MIXED, false, false, false},
-    {"without host balance", WINDROW_METHOD_MIXED, true, false, false},
-    {"without mixing", WINDROW_METHOD_MIXED, false, true, false},
-    {"without inner passes", WINDROW_METHOD_MIXED, false, false, true},
-    {"mixing alone", WINDROW_METHOD_MIXED, true, false, true},
-    {"host balance alone", WINDROW_METHOD_MIXED, false, true, true},
-    {"none: plain Gauss-Seidel", WINDROW_METHOD_MIXED, true, true, true},
+    {"no balance", WINDROW_METHOD_MIXED, true, false, false},
+    {"no mixing", WINDROW_METHOD_MIXED, false, true, false},
+    {"no inner", WINDROW_METHOD_MIXED, false, false, true},
+    {"mixing only", WINDROW_METHOD_MIXED, true, false, true},
+    {"balance only", WINDROW_METHOD_MIXED, false, true, true},
+    {"none of them", WINDROW_METHOD_MIXED, true, true, true},
 };
 enum { VARIANTS = sizeof variants / sizeof *variants };
 
 struct outcome {
     bool proven;
-    uint64_t sweeps, certifications, visits;
-    unsigned guard;
-    double error, seconds;
+    uint64_t passes, visits;
+    bool guarded;
 };
 
 /* Sweeps and certifies by the same rule as `windrow rank`. */
@@ -54,7 +54,6 @@ static struct outcome solve(const struct bench_store *store, struct windrow_crew
     };
     struct windrow_solver *solver;
     struct outcome outcome = {0};
-    double began = windrow_seconds();
     bench_expect(windrow_solver_create(&options, &solver), store->path);
     while (!outcome.proven && solver->state.sweeps < SWEEPS_MOST) {
         bench_expect(windrow_solver_sweep(solver), store->path);
@@ -63,14 +62,11 @@ static struct outcome solve(const struct bench_store *store, struct windrow_crew
         struct windrow_certificate certificate;
         bool complete;
         bench_expect(windrow_solver_certify(solver, error, 0, &certificate, &complete), store->path);
-        outcome.error = certificate.error_l1;
         outcome.proven = complete && certificate.error_l1 <= error;
     }
-    outcome.seconds = windrow_seconds() - began;
-    outcome.sweeps = solver->state.sweeps;
-    outcome.certifications = solver->state.certifications;
+    outcome.passes = solver->state.sweeps + solver->state.certifications;
     outcome.visits = solver->state.link_visits;
-    outcome.guard = (unsigned)solver->state.guard;
+    outcome.guarded = solver->state.guard != WINDROW_GUARD_OPEN;
     windrow_solver_destroy(solver);
     return outcome;
 }
@@ -97,33 +93,33 @@ int main(int argc, char **argv)
     static double logs[BETAS_MOST][VARIANTS];
     struct windrow_crew *crew;
     bench_expect(windrow_crew_create(windrow_crew_default_workers(), &crew), "threads");
+    printf("%-26s %4s %5s", "", "beta", variants[0].name);
+    for (unsigned v = 1; v < VARIANTS; v++)
+        printf("  %13s", variants[v].name);
+    putchar('\n');
     for (unsigned s = 0; s < store_count; s++) {
         struct bench_store store = bench_store_open(argv[3 + s]);
-        printf("%s: %llu pages, %llu links, of them core %llu pages, %llu links\n", basename(argv[3 + s]), (unsigned long long)store.web.pages,
-               (unsigned long long)(store.web.links[0] + store.web.links[1]), (unsigned long long)store.web.core_pages,
-               (unsigned long long)store.web.links[WINDROW_BLOCK_CORE]);
         for (unsigned b = 0; b < beta_count; b++) {
-            double power = 1;
-            for (unsigned v = 0; v < VARIANTS; v++) {
+            struct outcome power = solve(&store, crew, &variants[0], betas[b], error);
+            printf("%-26s %.2f %5llu", basename(argv[3 + s]), betas[b], (unsigned long long)power.passes);
+            for (unsigned v = 1; v < VARIANTS; v++) {
                 struct outcome outcome = solve(&store, crew, &variants[v], betas[b], error);
-                if (v == 0)
-                    power = (double)outcome.visits;
-                double share = outcome.proven ? (double)outcome.visits / power : INFINITY;
-                logs[b][v] += log(share);
-                printf("  beta %.2f  %-28s %6llu sweeps + %llu certifying  share %6.3f  %8.2f s%s%s\n", betas[b], variants[v].name,
-                       (unsigned long long)outcome.sweeps, (unsigned long long)outcome.certifications, share, outcome.seconds,
-                       outcome.guard ? outcome.guard > 1 ? "  guard: all off" : "  guard: balance off" : "",
-                       outcome.proven ? "" : "  NOT PROVEN");
+                double share = (double)outcome.visits / (double)power.visits;
+                logs[b][v] += outcome.proven && power.proven ? log(share) : INFINITY;
+                printf("  %.3f %4llu%s%s%*s", share, (unsigned long long)outcome.passes, outcome.guarded ? "*" : "", outcome.proven ? "" : "!",
+                       3 - outcome.guarded - !outcome.proven, "");
                 fflush(stdout);
             }
+            putchar('\n');
         }
         windrow_store_close(store.store);
     }
-    if (store_count > 1)
-        for (unsigned b = 0; b < beta_count; b++)
-            for (unsigned v = 0; v < VARIANTS; v++)
-                printf("geometric mean of %u  beta %.2f  %-28s share %6.3f\n", store_count, betas[b], variants[v].name,
-                       exp(logs[b][v] / store_count));
+    for (unsigned b = 0; store_count > 1 && b < beta_count; b++) {
+        printf("geometric mean of %-8u %.2f      ", store_count, betas[b]);
+        for (unsigned v = 1; v < VARIANTS; v++)
+            printf("  %.3f        ", exp(logs[b][v] / store_count));
+        putchar('\n');
+    }
     windrow_crew_destroy(crew);
     return 0;
 }
