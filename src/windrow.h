@@ -112,11 +112,13 @@ struct windrow_variant_counts {
     uint64_t by_www;
     uint64_t by_slash;
     uint64_t by_several;  /* of these at once */
+    uint64_t one_in;      /* 1: counted; more: a large crawl, estimated from so few of its URLs */
 };
 
 /* Looks for such pages in a finished store, and writes lines FROM TAB TO, in host order of FROM, which may be
  * looked through and given to --aliases. TO is the URL with https, without "www.", with the slash, in this
- * order of importance. `out_path`: a file to replace, NULL: only count. `watch` may be NULL. Errors:
+ * order of importance. `out_path`: a file to replace; NULL: only count, in one pass over the page table, and large
+ * crawls by a sample (drawn by a hash, so that variants are in it together). `watch` may be NULL. Errors:
  * WINDROW_USAGE (no store), WINDROW_NO (not finished yet), WINDROW_DAMAGED,
  * WINDROW_RESOURCE, WINDROW_STOPPED. */
 enum windrow_status windrow_suggest_aliases(const char *store, uint64_t memory_bytes, const char *out_path,

@@ -102,7 +102,7 @@ static enum windrow_status suggest(const struct windrow_shard_options *shard)
     enum windrow_status status = windrow_suggest_aliases(shard->out, shard->memory_bytes, suggest_path, &counts, &shard->watch);
     progress_end();
     if (!status)
-        talk("shard", "%s pages differ from another only by scheme (%s), www (%s), a slash (%s) or several of these (%s)%s%s", grouped(counts.pages),
+        talk("shard", "%s%s pages differ from another only by scheme (%s), www (%s), a slash (%s) or several of these (%s)%s%s", counts.one_in > 1 ? "about " : "", grouped(counts.pages),
              grouped(counts.by_scheme), grouped(counts.by_www), grouped(counts.by_slash), grouped(counts.by_several),
              suggest_path ? ": see " : "; --suggest-aliases FILE names them", suggest_path ? suggest_path : "");
     return status;

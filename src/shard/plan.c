@@ -184,7 +184,7 @@ static void count_variants(struct windrow_plan *plan, struct windrow_census *cen
     plan->variants = (struct windrow_interval){fmax(low - noise, 0), low * growth, (low + noise) * growth / plan->share};
     plan->variant_kinds = (struct windrow_variant_counts){
         (uint64_t)(low * growth), (uint64_t)((double)counts.by_scheme * scale * growth), (uint64_t)((double)counts.by_www * scale * growth),
-        (uint64_t)((double)counts.by_slash * scale * growth), (uint64_t)((double)counts.by_several * scale * growth)};
+        (uint64_t)((double)counts.by_slash * scale * growth), (uint64_t)((double)counts.by_several * scale * growth), (uint64_t)scale};
 }
 
 /* ---- The trial ---- */

@@ -12,6 +12,9 @@
 
 enum { HTTP = 0x01, HTTPS = 0x03 };
 
+/* Pages that counting alone keeps in memory, of a sample where there are more. */
+#define COUNTED_MOST (UINT64_C(1) << 21)
+
 size_t windrow_variants_shared(const uint8_t *key, size_t key_bytes, uint8_t *out, unsigned *features)
 {
     static const char www[] = {0x01, 'w', 'w', 'w'}; /* the last label of a host in a key is its first one */
@@ -179,11 +182,9 @@ static enum windrow_status read_chosen(struct finder *finder)
 }
 
 /* by_shared -> counts and, when lines are wanted, by_from: (FROM's key, TO's key). */
-static enum windrow_status pair_pages(struct finder *finder, bool lines)
+static enum windrow_status pair_pages(struct finder *finder)
 {
-    enum windrow_status status = WINDROW_OK;
-    if (lines)
-        status = windrow_sorter_create(finder->scratch, "variants-from", finder->memory_bytes / 2, &finder->by_from);
+    enum windrow_status status = windrow_sorter_create(finder->scratch, "variants-from", finder->memory_bytes / 2, &finder->by_from);
     finder->shared.bytes = finder->value.bytes = 0; /* of the group's first record, its TO */
     bool any = false;
     while (!status) {
@@ -193,9 +194,8 @@ static enum windrow_status pair_pages(struct finder *finder, bool lines)
             break;
         if (any && record.key_bytes == finder->shared.bytes && memcmp(record.key, finder->shared.data, record.key_bytes) == 0) {
             windrow_variants_count(finder->counts, 7u - record.value[0], 7u - finder->value.data[0]);
-            if (lines)
-                status = windrow_sorter_put(finder->by_from, &(struct windrow_record){record.value + 1, record.value_bytes - 1, finder->value.data + 1,
-                                                                                      finder->value.bytes - 1});
+            status = windrow_sorter_put(finder->by_from, &(struct windrow_record){record.value + 1, record.value_bytes - 1, finder->value.data + 1,
+                                                                                  finder->value.bytes - 1});
             continue;
         }
         any = true;
@@ -247,17 +247,65 @@ static enum windrow_status write_lines(struct finder *finder, const char *out_pa
     return status;
 }
 
+static int number_order(const void *a, const void *b)
+{
+    uint64_t left = *(const uint64_t *)a, right = *(const uint64_t *)b;
+    return (left > right) - (left < right);
+}
+
+/* Counting alone needs no keys: what variants share by its hash, and in the hash's last three bits what each has. */
+static enum windrow_status count_only(struct finder *finder)
+{
+    uint64_t pages = windrow_store_facts(finder->store)->pages, one_in = pages / COUNTED_MOST + 1, count = 0;
+    uint64_t *hashes = malloc((COUNTED_MOST * 5 / 4 + 1) * sizeof *hashes);
+    enum windrow_status status = hashes ? WINDROW_OK : windrow_fail(WINDROW_RESOURCE, "out of memory for counting variants");
+    for (uint64_t page = 0; !status && page < pages; page++) {
+        const uint8_t *key;
+        size_t key_bytes;
+        unsigned features;
+        if ((status = read_shared(finder, page, &key, &key_bytes, &features)))
+            break;
+        uint64_t hash = XXH3_64bits(finder->shared.data, finder->shared.bytes);
+        if (hash % one_in == 0 && count < COUNTED_MOST * 5 / 4)
+            hashes[count++] = (hash & ~UINT64_C(7)) | features;
+        if (finder->meter && (page + 1) % 4096 == 0)
+            windrow_meter_add(finder->meter, 4096);
+        if (page % 65536 == 0)
+            status = check_stop(finder);
+    }
+    if (!status) {
+        qsort(hashes, count, sizeof *hashes, number_order);
+        /* The best of a group stands last. */
+        for (uint64_t at = 0; at + 1 < count; at++) {
+            uint64_t best = at;
+            while (best + 1 < count && hashes[best + 1] >> 3 == hashes[at] >> 3)
+                best++;
+            if (best > at)
+                windrow_variants_count(finder->counts, hashes[at] & 7, hashes[best] & 7);
+        }
+        struct windrow_variant_counts *counts = finder->counts;
+        uint64_t *const all[] = {&counts->pages, &counts->by_scheme, &counts->by_www, &counts->by_slash, &counts->by_several};
+        for (size_t number = 0; number < sizeof all / sizeof all[0]; number++)
+            *all[number] *= one_in;
+        counts->one_in = one_in;
+    }
+    free(hashes);
+    return status;
+}
+
 enum windrow_status windrow_variants_find(const struct windrow_store *store, const char *scratch, uint64_t memory_bytes, const char *out_path,
                                           struct windrow_variant_counts *counts, struct windrow_meter *meter)
 {
-    *counts = (struct windrow_variant_counts){0};
+    *counts = (struct windrow_variant_counts){.one_in = 1};
     struct finder finder = {.store = store, .scratch = scratch, .memory_bytes = memory_bytes, .counts = counts, .meter = meter};
     enum windrow_status status = windrow_page_reader_create(store, &finder.reader);
-    if (status || (status = hash_pages(&finder)) || (status = choose_pages(&finder)) || (status = read_chosen(&finder)) ||
-        (status = pair_pages(&finder, out_path != NULL)))
-        goto out;
-    if (out_path)
+    if (!status && !out_path) {
+        status = count_only(&finder);
+    } else if (!status) {
+        if ((status = hash_pages(&finder)) || (status = choose_pages(&finder)) || (status = read_chosen(&finder)) || (status = pair_pages(&finder)))
+            goto out;
         status = write_lines(&finder, out_path);
+    }
 out:
     windrow_sorter_destroy(finder.by_hash);
     windrow_sorter_destroy(finder.by_page);
