@@ -62,6 +62,8 @@ static void test_without_damping(void **state)
     }
     oracle_sweep(&turning, b, a);
     assert_true(oracle_distance(a, b, 4) > 0.4L);
+    graph_free(&sink);
+    graph_free(&cycle);
 }
 
 static void test_two_methods_agree(void **state)
