@@ -8,8 +8,9 @@
 #include <string.h>
 #include <sys/stat.h>
 
-#define SAMPLE_BYTES (UINT64_C(32) << 20)
-#define LITTLE_BYTES (UINT64_C(64) << 20) /* dumps of this size fit wherever they themselves did */
+/* Planning takes about as long as sharding the sample: a small share of what a job takes that is worth planning. */
+#define SAMPLE_BYTES (UINT64_C(16) << 20)
+#define LITTLE_BYTES (UINT64_C(4) << 30)
 
 /* The directory that a path that may not exist yet would be made in. */
 static char *existing_parent(const char *path)
@@ -46,51 +47,59 @@ static enum windrow_status missing(const char *place, double needed, uint64_t fr
                         needed - (double)free_bytes);
 }
 
+static enum windrow_status plan_sample(const struct windrow_shard_options *options, struct windrow_plan *plan)
+{
+    struct windrow_plan_options planning;
+    windrow_plan_defaults(&planning);
+    planning.dumps = options->dumps;
+    planning.dump_count = options->dump_count;
+    planning.shape = options->shape;
+    planning.memory_bytes = options->memory_bytes;
+    planning.threads = options->threads;
+    planning.temporary = options->temporary;
+    planning.sample_bytes = SAMPLE_BYTES;
+    planning.keep_nofollow = options->keep_nofollow;
+    planning.watch.stop = options->watch.stop;
+    enum windrow_status status = windrow_plan(&planning, plan);
+    if (!status || status == WINDROW_STOPPED)
+        return status;
+    *plan = (struct windrow_plan){0}; /* ids, an @list, unreadable input: the job itself will say */
+    return WINDROW_OK;
+}
+
+/* Compares what is needed with what is free; an earlier store takes its own room again, and as much in scratch. */
+static enum windrow_status compare(const struct windrow_shard_options *options, const struct windrow_plan *plan, uint64_t earlier, const char *out,
+                                   const char *temporary)
+{
+    uint64_t out_free = windrow_disk_free_bytes(out), temporary_free = windrow_disk_free_bytes(temporary);
+    struct stat out_facts, temporary_facts;
+    bool same = stat(out, &out_facts) || stat(temporary, &temporary_facts) || out_facts.st_dev == temporary_facts.st_dev;
+    double store = plan->store_bytes.low + (double)earlier, scratch = plan->scratch_bytes.low + (double)earlier;
+    double together = plan->disk_bytes.low + 2 * (double)earlier;
+    if (same && together > (double)out_free)
+        return missing(options->out, together, out_free);
+    if (!same && store > (double)out_free)
+        return missing(options->out, store, out_free);
+    if (!same && scratch > (double)temporary_free)
+        return missing(options->temporary, scratch, temporary_free);
+    return WINDROW_OK;
+}
+
 enum windrow_status windrow_shard_check_disk(const struct windrow_shard_options *options, struct windrow_plan *plan)
 {
     *plan = (struct windrow_plan){0};
-    uint64_t bytes, earlier = 0;
+    uint64_t bytes;
     if (!options->out || windrow_file_exists(options->out) || !dump_bytes(options, &bytes))
         return WINDROW_OK;
-    if (options->add)
-        earlier = windrow_directory_bytes(options->add);
-    if (bytes >= LITTLE_BYTES) {
-        struct windrow_plan_options planning;
-        windrow_plan_defaults(&planning);
-        planning.dumps = options->dumps;
-        planning.dump_count = options->dump_count;
-        planning.shape = options->shape;
-        planning.memory_bytes = options->memory_bytes;
-        planning.threads = options->threads;
-        planning.temporary = options->temporary;
-        planning.sample_bytes = SAMPLE_BYTES;
-        planning.keep_nofollow = options->keep_nofollow;
-        planning.watch.stop = options->watch.stop;
-        enum windrow_status status = windrow_plan(&planning, plan);
-        if (status == WINDROW_STOPPED)
-            return status;
-        if (status) { /* ids, an @list, unreadable input: the job itself will say */
-            *plan = (struct windrow_plan){0};
-            return WINDROW_OK;
-        }
-    } else if (!earlier) {
-        return WINDROW_OK;
-    }
-    /* An earlier store takes its own room again, and as much in scratch. */
-    double store = plan->store_bytes.low + (double)earlier, scratch = plan->scratch_bytes.low + (double)earlier;
-    double together = plan->disk_bytes.low + 2 * (double)earlier;
+    uint64_t earlier = options->add ? windrow_directory_bytes(options->add) : 0;
     char *out = existing_parent(options->out), *temporary = existing_parent(options->temporary ? options->temporary : options->out);
     enum windrow_status status = out && temporary ? WINDROW_OK : windrow_fail(WINDROW_RESOURCE, "out of memory");
-    if (!status) {
-        uint64_t out_free = windrow_disk_free_bytes(out), temporary_free = windrow_disk_free_bytes(temporary);
-        struct stat out_facts, temporary_facts;
-        bool same = stat(out, &out_facts) || stat(temporary, &temporary_facts) || out_facts.st_dev == temporary_facts.st_dev;
-        if (same && together > (double)out_free)
-            status = missing(options->out, together, out_free);
-        else if (!same && store > (double)out_free)
-            status = missing(options->out, store, out_free);
-        else if (!same && scratch > (double)temporary_free)
-            status = missing(options->temporary, scratch, temporary_free);
+    /* Little dumps on a roomy disk need no planning: even of the best compressed ones a job takes no more than twice their size. */
+    bool roomy = !status && 2 * (bytes + earlier) < windrow_disk_free_bytes(out) && 2 * (bytes + earlier) < windrow_disk_free_bytes(temporary);
+    if (!status && (bytes >= LITTLE_BYTES || !roomy)) {
+        status = plan_sample(options, plan);
+        if (!status)
+            status = compare(options, plan, earlier, out, temporary);
     }
     free(out);
     free(temporary);

@@ -149,7 +149,7 @@ static void test_numbers(void **state)
         char *directory = scratch_make(), *dump = scratch_path(directory, "dump"), *path = scratch_path(directory, "store");
         const char *const dumps[] = {dump};
         struct windrow_shard_options options;
-        struct windrow_store *store;
+        struct windrow_store *store = NULL;
         world_make(&dice, world);
         dump_write(dump, world);
         windrow_shard_defaults(&options);
