@@ -193,7 +193,9 @@ struct windrow_rank_options {
     double beta;                   /* damping, 0 < beta < 1 */
     double digits;                 /* proven digits of every score to reach; 0: not asked for */
     double error;                  /* proven error_l1 to reach; 0: not asked for */
-    uint64_t memory_bytes;
+    uint64_t memory_bytes;         /* promise about peak resident memory; where the vectors do not fit they are kept in a file, the links
+                                    * are first cut into tiles beside the run, and 64 MiB may come on top. Fixed by the first
+                                    * checkpoint: later sessions need as much as the first, not less */
     unsigned threads;
     double checkpoint_seconds;
     bool fresh;                    /* forget an earlier run of this name */
@@ -204,7 +206,7 @@ void windrow_rank_defaults(struct windrow_rank_options *options);
 
 /* Starts, resumes or refines a run. *already_done (may be NULL) is set when nothing was left to do.
  * Errors: WINDROW_USAGE (no such store, or another beta or method under this name without `fresh`),
- * WINDROW_RESOURCE (the vectors do not fit memory_bytes, or asked for more digits than double precision
+ * WINDROW_RESOURCE (memory_bytes or the disk do not suffice, or asked for more digits than double precision
  * can prove: the message says how many it can), WINDROW_DAMAGED, WINDROW_STOPPED. */
 enum windrow_status windrow_rank(const struct windrow_rank_options *options, bool *already_done);
 

@@ -37,6 +37,19 @@ static void clear_totals(struct windrow_solver *solver)
         windrow_class_table_clear(&own->tables[worker]);
 }
 
+/* Roundings in a sum that was made of parts, one a stripe of sources and piece: as many as the longest list has in one part, and
+ * those of joining the parts. */
+static double parts_roundings(const struct windrow_solver *solver)
+{
+    const struct windrow_tiles *tiles = solver->options.tiles;
+    return windrow_kernel_roundings(UINT64_MAX) + tiles->stripes.count + (double)tiles->pieces_most;
+}
+
+static double core_roundings(const struct windrow_solver *solver, uint64_t links)
+{
+    return solver->options.tiles ? parts_roundings(solver) : windrow_kernel_roundings(links);
+}
+
 /* Adds a piece's sum to its list's. True when the list is whole: its sum and links are handed out. */
 static bool join_piece(struct windrow_solver *solver, const struct windrow_block_record *record, double piece_sum, double *sum, uint64_t *links)
 {
@@ -57,11 +70,11 @@ static bool join_piece(struct windrow_solver *solver, const struct windrow_block
 /* ---- The rim ------------------------------------------------------------------------------- */
 
 /* A dangling page's y is known: notes the roundings of its class (by y/v, as the scale is not known yet). */
-static double note_rim_page(struct windrow_solver *solver, struct windrow_class_table *table, uint64_t page, double sum, uint64_t links,
+static double note_rim_page(struct windrow_solver *solver, struct windrow_class_table *table, uint64_t page, double sum, double sum_roundings,
                             double *rounding)
 {
     double jump = windrow_solver_rim_jump(solver, page), beta = solver->options.beta, y = jump + beta * sum;
-    double roundings = (windrow_kernel_roundings(links) + 8) * unit;
+    double roundings = (sum_roundings + 8) * unit;
     solver->rim[page] = y;
     if (!(y > 0))
         return y;
@@ -92,7 +105,7 @@ static enum windrow_status rim_block(void *context, uint64_t block, unsigned ind
         return WINDROW_OK;
     uint32_t run = 0;
     for (uint32_t t = 0; t < kernel->record->target_count; t++)
-        slot->sum += note_rim_page(solver, &solver->own->tables[worker], first + t, sums[t], windrow_kernel_links(kernel, t, &run), &slot->rounding);
+        slot->sum += note_rim_page(solver, &solver->own->tables[worker], first + t, sums[t], windrow_kernel_roundings(windrow_kernel_links(kernel, t, &run)), &slot->rounding);
     return WINDROW_OK;
 }
 
@@ -106,7 +119,7 @@ static enum windrow_status rim_barrier(void *context, uint64_t first, uint64_t e
         double sum;
         uint64_t links;
         if (record->flags & WINDROW_BLOCK_PIECE && join_piece(solver, record, slot->piece_sum, &sum, &links))
-            slot->sum = note_rim_page(solver, &solver->own->tables[0], record->first_target, sum, links, &slot->rounding);
+            slot->sum = note_rim_page(solver, &solver->own->tables[0], record->first_target, sum, windrow_kernel_roundings(links), &slot->rounding);
         add_total(solver->own, slot->sum);
         solver->own->rounding += slot->rounding;
     }
@@ -114,15 +127,56 @@ static enum windrow_status rim_barrier(void *context, uint64_t first, uint64_t e
     return windrow_solver_stop_asked(solver);
 }
 
+/* With tiles: the vector of the rim holds the sums, and every page is noted. */
+struct rim_pass {
+    struct windrow_solver *solver;
+    struct rim_chunk {
+        double sum, rounding;
+    } *chunks;
+};
+
+static enum windrow_status rim_chunk_task(void *context, uint64_t chunk, unsigned worker)
+{
+    const struct rim_pass *pass = context;
+    struct windrow_solver *solver = pass->solver;
+    uint64_t rim_pages = solver->options.web->pages - solver->options.web->core_pages;
+    uint64_t first = chunk * WINDROW_MIXING_CHUNK, end = first + WINDROW_MIXING_CHUNK < rim_pages ? first + WINDROW_MIXING_CHUNK : rim_pages;
+    struct windrow_solver_private local = {0};
+    double rounding = 0, roundings = parts_roundings(solver);
+    for (uint64_t page = first; page < end; page++)
+        add_total(&local, note_rim_page(solver, &solver->own->tables[worker], page, solver->rim[page], roundings, &rounding));
+    windrow_solver_release(solver, solver->rim + first, (end - first) * sizeof *solver->rim);
+    pass->chunks[chunk] = (struct rim_chunk){local.total + local.total_error, rounding};
+    return WINDROW_OK;
+}
+
+static enum windrow_status pass_rim_by_stripes(struct windrow_solver *solver)
+{
+    uint64_t rim_pages = solver->options.web->pages - solver->options.web->core_pages;
+    uint64_t chunk_count = (rim_pages + WINDROW_MIXING_CHUNK - 1) / WINDROW_MIXING_CHUNK;
+    struct rim_pass pass = {solver, calloc(chunk_count + 1, sizeof *pass.chunks)};
+    if (!pass.chunks)
+        return windrow_fail(WINDROW_RESOURCE, "out of memory while certifying");
+    enum windrow_status status = windrow_solver_sum_rim(solver);
+    if (!status)
+        status = windrow_crew_run(solver->options.crew, chunk_count, rim_chunk_task, &pass);
+    for (uint64_t chunk = 0; !status && chunk < chunk_count; chunk++) {
+        add_total(solver->own, pass.chunks[chunk].sum);
+        solver->own->rounding += pass.chunks[chunk].rounding;
+    }
+    free(pass.chunks);
+    return status;
+}
+
 /* ---- The core ------------------------------------------------------------------------------ */
 
 /* Notes r without c v, by the scale as it is known so far. */
-static void note_core_page(struct windrow_solver *solver, struct windrow_class_table *table, uint64_t page, double sum, uint64_t links,
+static void note_core_page(struct windrow_solver *solver, struct windrow_class_table *table, uint64_t page, double sum, double sum_roundings,
                            struct windrow_solver_slot *slot)
 {
     double jump = windrow_solver_jump(solver, page), beta = solver->options.beta, scale = solver->scale;
     double jump_entry = jump / (1 - beta), h = jump + beta * sum, y = solver->values[page] * solver->options.web->degrees[page];
-    double rounding = (((windrow_kernel_roundings(links) + 3) * h + 4 * y) / scale + 16 * jump_entry) * unit;
+    double rounding = (((sum_roundings + 3) * h + 4 * y) / scale + 16 * jump_entry) * unit;
     double residual = fabs(h - y) / scale + rounding;
     slot->sum += residual;
     slot->rounding += rounding;
@@ -156,8 +210,10 @@ static enum windrow_status core_block(void *context, uint64_t block, unsigned in
     if (kernel->record->flags & WINDROW_BLOCK_PIECE)
         return WINDROW_OK;
     uint32_t run = 0;
-    for (uint32_t t = 0; t < kernel->record->target_count; t++)
-        note_core_page(solver, &solver->own->tables[worker], first + t, sums[t], windrow_kernel_links(kernel, t, &run), slot);
+    for (uint32_t t = 0; t < kernel->record->target_count; t++) {
+        double roundings = core_roundings(solver, windrow_kernel_links(kernel, t, &run));
+        note_core_page(solver, &solver->own->tables[worker], first + t, sums[t] + windrow_solver_inflow(solver, first + t), roundings, slot);
+    }
     return WINDROW_OK;
 }
 
@@ -171,7 +227,8 @@ static enum windrow_status core_barrier(void *context, uint64_t first, uint64_t 
         double sum;
         uint64_t links;
         if (record->flags & WINDROW_BLOCK_PIECE && join_piece(solver, record, slot->piece_sum, &sum, &links))
-            note_core_page(solver, &solver->own->tables[0], record->first_target, sum, links, slot);
+            note_core_page(solver, &solver->own->tables[0], record->first_target, sum + windrow_solver_inflow(solver, record->first_target),
+                           core_roundings(solver, links), slot);
         add_total(solver->own, slot->sum);
         solver->own->rounding += slot->rounding;
     }
@@ -196,6 +253,7 @@ static enum windrow_status core_sum_task(void *context, uint64_t chunk, unsigned
     for (uint64_t i = first; i < end && i < web->core_pages; i++)
         add_total(&local, core_sum->solver->values[i] * web->degrees[i]);
     core_sum->chunks[chunk] = local.total + local.total_error;
+    windrow_solver_release_pages(core_sum->solver, first, end < web->core_pages ? end : web->core_pages);
     return WINDROW_OK;
 }
 
@@ -298,7 +356,9 @@ enum windrow_status windrow_solver_certify(struct windrow_solver *solver, double
     double core_sum = own->total + own->total_error, core_scale = (1 - beta) + beta * core_sum;
     solver->scale = core_scale;
     clear_totals(solver);
-    status = windrow_streamer_run(own->streamer, WINDROW_BLOCK_CORE, 0, &core_job);
+    own->certifying = true;
+    status = windrow_solver_stream_core(solver, 0, &core_job);
+    own->certifying = false;
     solver->state.carry = (struct windrow_solver_carry){0};
     if (status)
         return status;
@@ -313,7 +373,10 @@ enum windrow_status windrow_solver_certify(struct windrow_solver *solver, double
     }
 
     clear_totals(solver);
-    status = windrow_streamer_run(own->streamer, WINDROW_BLOCK_RIM, 0, &rim_job);
+    if (solver->options.tiles)
+        status = pass_rim_by_stripes(solver);
+    else
+        status = windrow_solver_stream(solver, solver->options.web, WINDROW_BLOCK_RIM, 0, solver->options.web->block_count[WINDROW_BLOCK_RIM], &rim_job);
     solver->state.carry = (struct windrow_solver_carry){0};
     if (status)
         return status;

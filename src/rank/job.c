@@ -5,11 +5,15 @@
  *       generation before the last is no longer named; scores and order go under a new generation
  *   J2  a checkpoint is taken between two waves or two sweeps, so that going on from it gives the same bytes
  *   J3  whether to certify depends on the solver's state alone, which a checkpoint holds
+ *   J4  tiles are named by the ledger when they are whole, and forgotten by it before they are removed; the vectors of a
+ *       run with tiles lie in a file without a name, which nobody needs after a crash
  */
 #include "rank/record.h"
 #include "rank/solver.h"
 #include "rank/vector.h"
 
+#include <errno.h>
+#include <fcntl.h>
 #include <math.h>
 #include <stdio.h>
 #include <stdlib.h>
@@ -43,6 +47,9 @@ struct job {
     struct windrow_progress_record progress;
     struct windrow_run_sweep pending[HISTORY_PENDING];
     unsigned pending_count;
+    struct windrow_tiles_record tiled;
+    struct windrow_tiles *tiles;        /* NULL: vectors in memory */
+    int scratch;                        /* the vectors' file, with tiles */
     bool saved;                         /* the newest checkpoint holds the solver's state */
 };
 
@@ -276,19 +283,42 @@ static bool proves(const struct job *job, const struct windrow_certificate *cert
            (job->digits == 0 || windrow_certificate_digits(certificate) >= job->digits);
 }
 
+/* A new file for the vectors; without a name nothing is left behind, however this process ends. */
+static enum windrow_status open_scratch(struct job *job)
+{
+    char *path = windrow_path(job->directory, "vectors");
+    if (!path)
+        return windrow_fail(WINDROW_RESOURCE, "out of memory while beginning to rank");
+    enum windrow_status status = WINDROW_OK;
+    if (job->scratch >= 0)
+        windrow_files.close(job->scratch);
+    job->scratch = windrow_files.open(path, O_RDWR | O_CREAT | O_TRUNC, 0666);
+    if (job->scratch < 0)
+        status = windrow_fail_system(WINDROW_RESOURCE, errno, "cannot create %s", path);
+    else if (windrow_files.unlink(path))
+        status = windrow_fail_system(WINDROW_RESOURCE, errno, "cannot remove %s", path);
+    free(path);
+    return status;
+}
+
 static enum windrow_status make_solver(struct job *job)
 {
+    windrow_solver_destroy(job->solver);
+    job->solver = NULL;
+    enum windrow_status status = job->tiles ? open_scratch(job) : WINDROW_OK;
+    if (status)
+        return status;
     const struct windrow_solver_options options = {
         .web = &job->web,
         .crew = job->crew,
         .method = job->options->method,
         .beta = job->options->beta,
+        .tiles = job->tiles,
+        .scratch = job->scratch,
         .meter = &job->meter,
         .pause = pause_job,
         .pause_context = job,
     };
-    windrow_solver_destroy(job->solver);
-    job->solver = NULL;
     return windrow_solver_create(&options, &job->solver);
 }
 
@@ -332,14 +362,115 @@ static uint64_t needed_bytes(const struct job *job)
     return windrow_solver_memory_bytes(&job->web) + degrees + blocks + power + overhead_bytes;
 }
 
-static enum windrow_status check_memory(const struct job *job)
+/* ---- Memory -------------------------------------------------------------------------------- */
+
+/* What a store keeps in memory while it is ranked, without the degrees: hosts, core map, block records. */
+static uint64_t store_bytes(const struct job *job)
 {
-    uint64_t needed = needed_bytes(job);
-    if (needed <= job->options->memory_bytes)
+    return job->web.host_count * 40 + job->web.pages / 3 +
+           (job->web.block_count[WINDROW_BLOCK_CORE] + job->web.block_count[WINDROW_BLOCK_RIM]) * sizeof(struct windrow_block_record);
+}
+
+/* With tiles. What does not grow with the crawl, overhead_bytes, comes on top of --memory then. */
+static uint64_t tiled_bytes(const struct job *job, unsigned wanted)
+{
+    struct windrow_stripes stripes;
+    windrow_stripes_cut(&job->web, wanted, &stripes);
+    return windrow_solver_stripe_bytes(&job->web, &stripes) + windrow_tiles_memory_bytes(&job->web, stripes.count) + store_bytes(job);
+}
+
+static enum windrow_status refuse_memory(const struct job *job, uint64_t needed, const char *advice)
+{
+    return windrow_fail(WINDROW_RESOURCE, "ranking %llu pages takes %llu MiB of memory%s and the budget is %llu MiB; give more by --memory %lluM%s",
+                        (unsigned long long)job->web.pages, (unsigned long long)((needed >> 20) + 1), *advice ? " the way it was begun" : "",
+                        (unsigned long long)(job->options->memory_bytes >> 20), (unsigned long long)((needed >> 20) + 1), advice);
+}
+
+/* As few stripes as will do; none where the vectors fit. */
+static enum windrow_status choose_stripes(struct job *job)
+{
+    uint64_t least = UINT64_MAX, needed = needed_bytes(job), memory = job->options->memory_bytes;
+    job->tiled = (struct windrow_tiles_record){0};
+    if (needed <= memory)
         return WINDROW_OK;
-    return windrow_fail(WINDROW_RESOURCE, "ranking %llu pages takes %llu MiB of memory and the budget is %llu MiB; give more by --memory %lluM",
-                        (unsigned long long)job->web.pages, (unsigned long long)((needed >> 20) + 1),
-                        (unsigned long long)(job->options->memory_bytes >> 20), (unsigned long long)((needed >> 20) + 1));
+    if (job->options->method == WINDROW_METHOD_POWER)
+        return refuse_memory(job, needed, "");
+    for (unsigned wanted = 2; wanted <= WINDROW_STRIPES_MOST; wanted++) {
+        uint64_t bytes = tiled_bytes(job, wanted);
+        least = bytes < least ? bytes : least;
+        if (bytes <= memory) {
+            job->tiled.wanted = wanted;
+            return WINDROW_OK;
+        }
+    }
+    return refuse_memory(job, least, "");
+}
+
+static enum windrow_status commit_tiles(struct job *job)
+{
+    const struct windrow_ledger_record record = {WINDROW_TILES_KEY, &job->tiled, sizeof job->tiled};
+    return windrow_ledger_commit(job->ledger, &record, 1);
+}
+
+static enum windrow_status forget_tiles(struct job *job)
+{
+    job->tiled.built = 0;
+    enum windrow_status status = commit_tiles(job);
+    return status ? status : windrow_tiles_remove(job->directory);
+}
+
+static enum windrow_status build_tiles(struct job *job)
+{
+    struct windrow_stripes stripes;
+    enum windrow_status status = forget_tiles(job);
+    if (status)
+        return status;
+    windrow_stripes_cut(&job->web, (unsigned)job->tiled.wanted, &stripes);
+    windrow_meter_stage(&job->meter, "cutting links into tiles", "links", job->web.links[WINDROW_BLOCK_CORE] + job->web.links[WINDROW_BLOCK_RIM]);
+    status = windrow_tiles_build(&job->web, job->crew, &stripes, job->directory, windrow_store_facts(job->store)->fingerprint,
+                                 &job->tiled.checksum, &job->meter);
+    windrow_meter_stage_end(&job->meter);
+    if (status) {
+        windrow_tiles_remove(job->directory);
+        return status;
+    }
+    job->tiled.built = 1;
+    return commit_tiles(job);
+}
+
+static enum windrow_status open_tiles(struct job *job)
+{
+    return windrow_tiles_open(&job->web, job->directory, windrow_store_facts(job->store)->fingerprint, job->tiled.checksum, &job->tiles);
+}
+
+/* Finds out whether the vectors fit the memory, and readies the tiles where they do not. */
+static enum windrow_status prepare_memory(struct job *job)
+{
+    enum windrow_status status = get_or_none(job, WINDROW_TILES_KEY, &job->tiled, sizeof job->tiled);
+    if (status)
+        return status;
+    if (job->tiled.wanted > WINDROW_STRIPES_MOST)
+        return windrow_fail(WINDROW_DAMAGED, "the ledger of the run %s tells of %llu stripes; rank again with --fresh", job->name,
+                            (unsigned long long)job->tiled.wanted);
+    if (job->checkpoint.generation) {
+        uint64_t needed = job->tiled.wanted ? tiled_bytes(job, (unsigned)job->tiled.wanted) : needed_bytes(job);
+        if (needed > job->options->memory_bytes)
+            return refuse_memory(job, needed, ", or begin it anew within this budget by --fresh");
+    } else {
+        struct windrow_tiles_record before = job->tiled;
+        if ((status = choose_stripes(job)))
+            return status;
+        if (job->tiled.wanted == before.wanted)
+            job->tiled = before;
+        else if ((status = forget_tiles(job)))
+            return status;
+    }
+    if (!job->tiled.wanted)
+        return WINDROW_OK;
+    if (job->tiled.built && (status = open_tiles(job)) != WINDROW_DAMAGED)
+        return status;
+    status = build_tiles(job);
+    return status ? status : open_tiles(job);
 }
 
 /* ---- Sweeping ------------------------------------------------------------------------------ */
@@ -469,7 +600,8 @@ static enum windrow_status publish(struct job *job, const struct windrow_certifi
     if ((status = save_checkpoint(job)))
         goto out;
     windrow_meter_stage(&job->meter, "ordering", "pages", 2 * pages);
-    uint64_t memory = job->options->memory_bytes - needed_bytes(job);
+    uint64_t kept = job->tiles ? store_bytes(job) + job->web.core_pages / job->tiles->stripes.count * sizeof(double) : needed_bytes(job);
+    uint64_t memory = job->options->memory_bytes > kept ? job->options->memory_bytes - kept : 0;
     status = windrow_order_build(scores, WINDROW_SCORES_OFFSET, pages, memory > WINDROW_ORDER_MEMORY_LEAST ? memory : WINDROW_ORDER_MEMORY_LEAST,
                                  job->options->threads, order, &job->meter);
     windrow_meter_stage_end(&job->meter);
@@ -484,6 +616,9 @@ static enum windrow_status publish(struct job *job, const struct windrow_certifi
     if (job->certified.generation)
         forget_generation(job, job->certified.generation);
     job->certified = next;
+    /* The same tiles can be made again, should more digits be asked for. */
+    if (job->tiles)
+        status = forget_tiles(job);
 out:
     free(scores);
     free(order);
@@ -510,11 +645,11 @@ static enum windrow_status run_job(struct job *job, bool *already_done)
     windrow_web_of_store(job->store, &job->web);
     if (job->web.pages == 0)
         return windrow_fail(WINDROW_INPUT, "the store %s has no pages, so that there is nothing to rank", options->store);
-    if ((status = check_memory(job)))
-        return status;
     if ((status = windrow_web_check(&job->web)))
         return status;
     if ((status = windrow_crew_create(options->threads ? options->threads : 1, &job->crew)))
+        return status;
+    if ((status = prepare_memory(job)))
         return status;
     if ((status = resume(job)))
         return status;
@@ -542,7 +677,7 @@ enum windrow_status windrow_rank(const struct windrow_rank_options *options, boo
         return windrow_fail(WINDROW_RESOURCE, "out of memory while beginning to rank");
     job->options = options;
     job->name = options->run ? options->run : "main";
-    job->lock = -1;
+    job->lock = job->scratch = -1;
     job->digits = options->digits;
     job->error = options->error;
     if (job->digits == 0 && job->error == 0)
@@ -552,6 +687,9 @@ enum windrow_status windrow_rank(const struct windrow_rank_options *options, boo
     status = run_job(job, &done);
     windrow_meter_finish(&job->meter);
     windrow_solver_destroy(job->solver);
+    windrow_tiles_close(job->tiles);
+    if (job->scratch >= 0)
+        windrow_files.close(job->scratch);
     windrow_crew_destroy(job->crew);
     windrow_ledger_close(job->ledger);
     windrow_store_close(job->store);

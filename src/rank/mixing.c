@@ -33,6 +33,12 @@ static uint64_t chunk_end(const struct windrow_mixing *mixing, uint64_t chunk)
     return end < mixing->pages ? end : mixing->pages;
 }
 
+static void release(const struct windrow_mixing *mixing, uint64_t first, uint64_t end)
+{
+    if (mixing->release)
+        mixing->release(mixing->release_context, first, end);
+}
+
 /* Two pages side by side: the same additions on every machine, and fast on those with such registers. */
 typedef double pair __attribute__((vector_size(16)));
 
@@ -127,6 +133,7 @@ static enum windrow_status measure_task(void *context, uint64_t chunk, unsigned 
         }
     }
     step->chunks[chunk] = sums;
+    release(step->mixing, first, end);
     return WINDROW_OK;
 }
 
@@ -227,6 +234,7 @@ static enum windrow_status mix_task(void *context, uint64_t chunk, unsigned work
         mix(step, COLUMNS, first, end);
     else
         mix(step, step->columns, first, end);
+    release(step->mixing, first, end);
     return WINDROW_OK;
 }
 

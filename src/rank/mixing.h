@@ -32,6 +32,9 @@ struct windrow_mixing {
     float *change_columns[WINDROW_MIXING_COLUMNS];  /* dF */
     float *value_columns[WINDROW_MIXING_COLUMNS];   /* dG */
     struct windrow_mixing_state state;
+    /* Called when the work on the pages [first, end) is done for now, from any of the crew's threads. May be NULL. */
+    void (*release)(const void *context, uint64_t first, uint64_t end);
+    const void *release_context;
 };
 
 struct windrow_mixing_result {

@@ -5,6 +5,7 @@
  *   certified              struct windrow_certified_record    when scores are handed out
  *   checkpoint             struct windrow_checkpoint_record   the newest
  *   checkpoint/before      the same, the one before
+ *   tiles                  struct windrow_tiles_record        of a run whose vectors are larger than its memory
  *   history/NNNNNNNNNNNN   struct windrow_run_sweep           one a sweep
  *
  * Records are fixed structures of 8-byte fields in the machine's (little-endian) order.
@@ -47,6 +48,14 @@ struct windrow_checkpoint_record {
     double elapsed_seconds;
 };
 
+/* Stripes are fixed with the first checkpoint: another number would lead to other bytes. */
+struct windrow_tiles_record {
+    uint64_t wanted;         /* stripes that windrow_stripes_cut() was asked for; 0: vectors in memory */
+    uint64_t built;          /* 1: the tiles are there */
+    uint64_t checksum;       /* of their index */
+};
+
+#define WINDROW_TILES_KEY "tiles"
 #define WINDROW_SETTINGS_KEY "settings"
 #define WINDROW_PROGRESS_KEY "progress"
 #define WINDROW_CERTIFIED_KEY "certified"

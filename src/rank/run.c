@@ -1,6 +1,7 @@
 #include "rank/run.h"
 
 #include "rank/record.h"
+#include "sweep/tiles.h"
 #include "rank/vector.h"
 
 #include <dirent.h>
@@ -273,6 +274,24 @@ static void verify_checkpoint(const struct windrow_run *run, const char *key, st
     free(path);
 }
 
+static void verify_tiles(const struct windrow_store *store, const struct windrow_run *run, struct verification *verification)
+{
+    struct windrow_tiles_record record;
+    struct windrow_tiles *tiles = NULL;
+    struct windrow_web web;
+    enum windrow_status status = windrow_ledger_get(run->ledger, WINDROW_TILES_KEY, &record, sizeof record);
+    if (status == WINDROW_NO || (!status && !record.built))
+        return; /* its vectors fit the memory, or the tiles are not needed now */
+    windrow_web_of_store(store, &web);
+    if (!status)
+        status = windrow_tiles_open(&web, run->directory, windrow_store_facts(store)->fingerprint, record.checksum, &tiles);
+    if (!status)
+        status = windrow_tiles_read_back(tiles);
+    if (status)
+        report(verification);
+    windrow_tiles_close(tiles);
+}
+
 static enum windrow_status ignore_sweep(void *context, const struct windrow_run_sweep *sweep)
 {
     (void)context;
@@ -298,6 +317,7 @@ enum windrow_status windrow_run_verify(const struct windrow_store *store, const 
     if (!run->facts.working) {
         verify_checkpoint(run, WINDROW_CHECKPOINT_KEY, &verification);
         verify_checkpoint(run, WINDROW_CHECKPOINT_BEFORE_KEY, &verification);
+        verify_tiles(store, run, &verification);
     }
     if (windrow_run_history(run, ignore_sweep, NULL))
         report(&verification);

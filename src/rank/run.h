@@ -4,6 +4,7 @@
  *   scores-G.f64       scores by page id, of the generation G that is certified
  *   order-G            pages by falling score (order.h)
  *   state-0, state-1   checkpoints, the newest and the one before
+ *   tiles-*            the links cut by stripes, while a run goes on whose vectors are larger than memory (sweep/tiles.h)
  * and STORE/runs/NAME.lock is held by whoever works on it.
  *
  * A run can be opened while another process works on it: what is open stays what was certified then.

@@ -35,12 +35,52 @@ uint64_t windrow_solver_memory_bytes(const struct windrow_web *web)
     return vector_bytes(web) + web->block_count[WINDROW_BLOCK_CORE] * sizeof(uint64_t);
 }
 
+/* Of each page of the stripe that is swept: its value, its change, both degrees, and what flows in. */
+enum { STRIPE_PAGE_BYTES = 8 + 4 + 8 + 8 };
+
+uint64_t windrow_solver_stripe_bytes(const struct windrow_web *web, const struct windrow_stripes *stripes)
+{
+    return windrow_stripes_pages_most(stripes) * STRIPE_PAGE_BYTES + web->host_count + web->block_count[WINDROW_BLOCK_CORE] * (1 + sizeof(uint64_t));
+}
+
 /* Anonymous memory in large pages where the system has them: most of a sweep's misses are of addresses. */
 static void *vector_take(uint8_t **memory, uint64_t bytes)
 {
     void *vector = *memory;
     *memory += rounded(bytes);
     return vector;
+}
+
+/* The vectors' memory: of the process alone, or of the scratch file, whose space is reserved before it is mapped. */
+static enum windrow_status take_memory(struct windrow_solver *solver)
+{
+    struct windrow_solver_private *own = solver->own;
+    const struct windrow_tiles *tiles = solver->options.tiles;
+    if (tiles && own->memory_bytes) {
+        int error_number = windrow_files.reserve(solver->options.scratch, 0, (off_t)own->memory_bytes);
+        if (error_number)
+            return windrow_fail_system(WINDROW_RESOURCE, error_number, "cannot reserve %llu bytes of disk for the vectors of this ranking",
+                                       (unsigned long long)own->memory_bytes);
+    }
+    if (own->memory_bytes) {
+        own->memory = mmap(NULL, own->memory_bytes, PROT_READ | PROT_WRITE, tiles ? MAP_SHARED : MAP_PRIVATE | MAP_ANONYMOUS,
+                           tiles ? solver->options.scratch : -1, 0);
+        if (own->memory == MAP_FAILED) {
+            own->memory = NULL;
+            goto memory;
+        }
+        if (!tiles)
+            madvise(own->memory, own->memory_bytes, MADV_HUGEPAGE);
+    }
+    if (tiles) {
+        own->stripe_sums = malloc((windrow_stripes_pages_most(&tiles->stripes) + 1) * sizeof *own->stripe_sums);
+        if (!own->stripe_sums)
+            goto memory;
+    }
+    return WINDROW_OK;
+memory:
+    return windrow_fail(WINDROW_RESOURCE, "out of memory: the vectors of this ranking take %llu bytes",
+                        (unsigned long long)windrow_solver_memory_bytes(solver->options.web));
 }
 
 static void find_hosts_of_blocks(struct windrow_solver *solver)
@@ -63,6 +103,7 @@ static enum windrow_status fill_start(void *context, uint64_t chunk, unsigned wo
     uint64_t first = chunk * WINDROW_MIXING_CHUNK, end = first + WINDROW_MIXING_CHUNK;
     for (uint64_t i = first; i < end && i < web->core_pages; i++)
         solver->values[i] = (solver->options.core_jump ? solver->options.core_jump[i] : 1.0 / (double)web->pages) / web->degrees[i];
+    windrow_solver_release_pages(solver, first, end < web->core_pages ? end : web->core_pages);
     return WINDROW_OK;
 }
 
@@ -81,19 +122,15 @@ enum windrow_status windrow_solver_create(const struct windrow_solver_options *o
     own->first_hosts = malloc((web->block_count[WINDROW_BLOCK_CORE] + 1) * sizeof *own->first_hosts);
     if (!own->tables || !own->first_hosts)
         goto memory;
-    if (own->memory_bytes) {
-        own->memory = mmap(NULL, own->memory_bytes, PROT_READ | PROT_WRITE, MAP_PRIVATE | MAP_ANONYMOUS, -1, 0);
-        if (own->memory == MAP_FAILED) {
-            own->memory = NULL;
-            goto memory;
-        }
-        madvise(own->memory, own->memory_bytes, MADV_HUGEPAGE);
-    }
+    own->passing = web;
+    if ((status = take_memory(made)))
+        goto failed;
     uint8_t *memory = own->memory;
     uint64_t floats = web->core_pages * sizeof(float);
     made->values = vector_take(&memory, web->core_pages * sizeof(double));
     made->rim = vector_take(&memory, rim_pages(web) * sizeof(double));
-    made->mixing = (struct windrow_mixing){.pages = web->core_pages, .degrees = web->degrees, .change = vector_take(&memory, floats)};
+    made->mixing = (struct windrow_mixing){.pages = web->core_pages, .degrees = web->degrees, .change = vector_take(&memory, floats),
+                                            .release = options->tiles ? windrow_solver_release_pages : NULL, .release_context = made};
     for (int c = 0; c < WINDROW_MIXING_COLUMNS; c++) {
         made->mixing.change_columns[c] = vector_take(&memory, floats);
         made->mixing.value_columns[c] = vector_take(&memory, floats);
@@ -131,6 +168,7 @@ void windrow_solver_destroy(struct windrow_solver *solver)
             munmap(own->memory, own->memory_bytes);
         free(own->tables);
         free(own->first_hosts);
+        free(own->stripe_sums);
         free(own);
     }
     free(solver);
@@ -248,6 +286,9 @@ static enum windrow_status relax_block(void *context, uint64_t block, unsigned i
     bool reaches_out = slot->own[0].target_end || slot->own[1].target_end;
     if ((status = windrow_kernel_gather(kernel, solver->values, web->core_pages, reaches_out ? slot->own : NULL)))
         return status;
+    if (solver->own->inflow && !(record->flags & WINDROW_BLOCK_PIECE))
+        for (uint32_t t = 0; t < record->target_count; t++)
+            kernel->far[t] += windrow_solver_inflow(solver, first + t);
     if (record->flags & WINDROW_BLOCK_PIECE) {
         if ((status = windrow_kernel_sums(kernel, solver->values, web->core_pages, values)))
             return status;
@@ -347,10 +388,11 @@ static void update_piece(struct windrow_solver *solver, uint64_t page, struct wi
     const struct windrow_web *web = solver->options.web;
     const struct windrow_solver_carry *carry = &solver->state.carry;
     double beta = solver->options.beta, jump = windrow_solver_jump(solver, page), before = solver->values[page];
-    double value = (jump + beta * (carry->piece_sum + carry->piece_error)) / web->degrees[page];
+    double sum = carry->piece_sum + carry->piece_error + windrow_solver_inflow(solver, page);
+    double value = (jump + beta * sum) / web->degrees[page];
     solver->values[page] = value;
     solver->mixing.change[page] = (float)(value - before);
-    slot->inflow[0] = jump + beta * ((carry->piece_sum + carry->piece_error) - carry->piece_own);
+    slot->inflow[0] = jump + beta * (sum - carry->piece_own);
     slot->kept[0] = value * ((double)web->degrees[page] - beta * web->inside_degrees[page]);
 }
 
@@ -378,6 +420,9 @@ static enum windrow_status settle_block(struct windrow_solver *solver, uint64_t 
         carry->host_inflow += slot->inflow[side];
         carry->host_kept += slot->kept[side];
         if (own->end > end || unfinished)
+            continue;
+        /* Part of its inflow is lost in that from other stripes. */
+        if (solver->own->inflow && own->first < solver->own->inflow_first)
             continue;
         enum windrow_status status = balance_across(solver, own->first, own->end);
         if (status)
@@ -483,7 +528,7 @@ enum windrow_status windrow_solver_sweep(struct windrow_solver *solver)
     if (!solver->options.without_inner_passes && state->sweeps >= INNER_FROM)
         solver->own->worth = WORTH * change_before(state, 0) * next_fall(state) / (double)(solver->options.web->links[WINDROW_BLOCK_CORE] + 1);
     const struct windrow_stream_job job = {.context = solver, .work = relax_block, .barrier = sweep_barrier};
-    enum windrow_status status = windrow_streamer_run(solver->own->streamer, WINDROW_BLOCK_CORE, solver->state.next_block, &job);
+    enum windrow_status status = windrow_solver_stream_core(solver, solver->state.next_block, &job);
     return status ? status : finish_sweep(solver);
 }
 

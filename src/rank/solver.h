@@ -14,6 +14,11 @@
  *
  * Where a host changes much beside the average link, its near links get more passes inside a sweep.
  *
+ * With tiles (sweep/tiles.h) the vectors lie in a mapped file, and no more of them than a stripe's is in memory at a
+ * time. A sweep takes one stripe of targets after another: first it adds up what flows in from the other stripes, whose
+ * values are looked at in turn and let go of, then it sweeps the stripe's own links as above. Hosts that reach across
+ * a border of stripes are not balanced.
+ *
  * The method `power` is plain power iteration over all links, the tests' witness.
  *
  * Everything is deterministic: the same web gives the same bytes for any crew, and a sweep that was stopped
@@ -28,6 +33,7 @@
 #include "rank/certificate.h"
 #include "rank/mixing.h"
 #include "sweep/stream.h"
+#include "sweep/tiles.h"
 
 enum { WINDROW_SOLVER_MEMORY_SWEEPS = 20 };
 
@@ -44,6 +50,8 @@ struct windrow_solver_options {
     bool without_balance;       /* for measuring what each costs and brings */
     bool without_mixing;
     bool without_inner_passes;
+    const struct windrow_tiles *tiles;  /* of the web; NULL: vectors in memory. Not for the method `power` */
+    int scratch;                /* with tiles: descriptor of an empty file for the vectors, which the caller closes afterwards */
     struct windrow_meter *meter;  /* counts links; may be NULL */
     /* Called between two waves, when the state may be saved; anything but WINDROW_OK ends the sweep there,
      * to be gone on with by calling windrow_solver_sweep() again. May be NULL. */
@@ -90,6 +98,13 @@ struct windrow_solver {
 
 /* Bytes that a solver's vectors take in memory. */
 uint64_t windrow_solver_memory_bytes(const struct windrow_web *web);
+/* Bytes that are in memory at a time with tiles of these stripes, degrees included. */
+uint64_t windrow_solver_stripe_bytes(const struct windrow_web *web, const struct windrow_stripes *stripes);
+
+/* With tiles: lets go of a part of a vector, which comes back from its file when it is looked at again. Else nothing. */
+void windrow_solver_release(const struct windrow_solver *solver, const void *memory, uint64_t bytes);
+/* The same for all vectors and degrees. */
+void windrow_solver_release_all(const struct windrow_solver *solver);
 
 /* A solver at its starting vector. The web must have passed windrow_web_check(). Options are copied, what
  * they point to must outlive the solver. */

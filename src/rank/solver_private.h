@@ -1,5 +1,5 @@
-/* What the solver's files share among themselves: sweeps (solver.c), plain power iteration (power.c), and
- * the certifying passes (certify.c). Nobody else includes this. */
+/* What the solver's files share among themselves: sweeps (solver.c), what flows in from other stripes (inflow.c),
+ * plain power iteration (power.c), and the certifying passes (certify.c). Nobody else includes this. */
 #ifndef WINDROW_RANK_SOLVER_PRIVATE_H
 #define WINDROW_RANK_SOLVER_PRIVATE_H
 
@@ -26,6 +26,11 @@ struct windrow_solver_private {
     uint64_t wave_first;
     uint64_t inner_links_most;            /* near links of a host that may get more passes: larger ones are the sweep itself */
     double worth;                         /* change on a near link that makes another pass inside a host pay */
+    const struct windrow_web *passing;    /* the web whose blocks are streamed now: the options' own, or one of the tiles' */
+    double *stripe_sums;                  /* room for one double a page of the largest stripe */
+    double *inflow;                       /* what flows in from other stripes, from the page (or rim page) inflow_first on */
+    uint64_t inflow_first;
+    bool certifying;
     /* Certifying. */
     double total, total_error, rounding;  /* sums over the blocks so far, compensated */
     uint64_t piece_links;
@@ -60,10 +65,10 @@ static inline double *windrow_solver_slot_values(const struct windrow_solver_slo
     return (double *)(void *)slot->values.data;
 }
 
-/* Counts the links of the blocks [first, end) as visited. */
+/* Counts the links of the blocks [first, end), which were just streamed, as visited. */
 static inline void windrow_solver_count_links(struct windrow_solver *solver, enum windrow_block_kind kind, uint64_t first, uint64_t end)
 {
-    const struct windrow_web *web = solver->options.web;
+    const struct windrow_web *web = solver->own->passing;
     uint64_t links = 0;
     for (uint64_t block = first; block < end; block++)
         links += web->record(web->context, kind, block)->link_count;
@@ -80,6 +85,27 @@ static inline enum windrow_status windrow_solver_stop_asked(const struct windrow
     return WINDROW_OK;
 }
 
+/* Streams blocks of the web, or of a web of the tiles. */
+static inline enum windrow_status windrow_solver_stream(struct windrow_solver *solver, const struct windrow_web *web, enum windrow_block_kind kind,
+                                                        uint64_t first, uint64_t end, const struct windrow_stream_job *job)
+{
+    solver->own->passing = web;
+    return windrow_streamer_run_part(solver->own->streamer, web, kind, first, end, job);
+}
+
+/* What flows into a core page of the stripe at work from other stripes. */
+static inline double windrow_solver_inflow(const struct windrow_solver *solver, uint64_t page)
+{
+    const struct windrow_solver_private *own = solver->own;
+    return own->inflow ? own->inflow[page - own->inflow_first] : 0;
+}
+
+/* Streams the core's blocks from `first` on, stripe by stripe where there are tiles. */
+enum windrow_status windrow_solver_stream_core(struct windrow_solver *solver, uint64_t first, const struct windrow_stream_job *job);
+/* With tiles: fills the vector of the rim with the sums over in-links. */
+enum windrow_status windrow_solver_sum_rim(struct windrow_solver *solver);
+/* Lets go of core pages in all vectors; for mixing, too. */
+void windrow_solver_release_pages(const void *solver, uint64_t first, uint64_t end);
 void windrow_solver_remember_change(struct windrow_solver *solver, double change);
 enum windrow_status windrow_solver_power_sweep(struct windrow_solver *solver);
 

@@ -37,7 +37,7 @@ static uint64_t header_checksum(const struct scores_header *header)
 
 /* ---- Scores -------------------------------------------------------------------------------- */
 
-enum { BATCH = 8192 };
+enum { BATCH = 8192, RELEASE_PAGES = 1 << 18 };
 
 static enum windrow_status append_scores(struct windrow_writer *writer, const struct windrow_solver *solver,
                                          const struct windrow_store *store, uint64_t *checksum)
@@ -58,7 +58,10 @@ static enum windrow_status append_scores(struct windrow_writer *writer, const st
         }
         XXH3_64bits_update(running, batch, count * sizeof *batch);
         status = windrow_writer_append(writer, batch, count * sizeof *batch);
+        if (page / RELEASE_PAGES != (page - count) / RELEASE_PAGES)
+            windrow_solver_release_all(solver);
     }
+    windrow_solver_release_all(solver);
     *checksum = XXH3_64bits_digest(running);
     XXH3_freeState(running);
     return status;
@@ -127,6 +130,14 @@ damaged:
 
 /* ---- Checkpoints --------------------------------------------------------------------------- */
 
+/* Vectors are written and read in parts, each let go of before the next. */
+enum { PART_BYTES = 1 << 20 };
+
+static uint64_t part_bytes(const struct windrow_solver_vector *vector, uint64_t at)
+{
+    return vector->bytes - at < PART_BYTES ? vector->bytes - at : PART_BYTES;
+}
+
 static enum windrow_status append_hashed(struct windrow_writer *writer, XXH3_state_t *running, const void *data, uint64_t bytes)
 {
     if (bytes == 0)
@@ -162,8 +173,13 @@ enum windrow_status windrow_state_write(const char *directory, const char *path,
     if ((status = append_hashed(&writer, running, &solver->state, sizeof solver->state)))
         goto out;
     for (unsigned v = 0; v < count; v++)
-        if ((status = append_hashed(&writer, running, vectors[v].data, vectors[v].bytes)))
-            goto out;
+        for (uint64_t at = 0; at < vectors[v].bytes; at += PART_BYTES) {
+            uint64_t bytes_now = part_bytes(&vectors[v], at);
+            uint8_t *data = (uint8_t *)vectors[v].data + at;
+            if ((status = append_hashed(&writer, running, data, bytes_now)))
+                goto out;
+            windrow_solver_release(solver, data, bytes_now);
+        }
     *checksum = XXH3_64bits_digest(running);
     if ((status = windrow_writer_append(&writer, checksum, sizeof *checksum)))
         goto out;
@@ -219,8 +235,13 @@ enum windrow_status windrow_state_read(const char *path, struct windrow_solver *
     if ((status = read_hashed(descriptor, path, &offset, running, &state, sizeof state)))
         goto out;
     for (unsigned v = 0; v < count; v++)
-        if ((status = read_hashed(descriptor, path, &offset, running, vectors[v].data, vectors[v].bytes)))
-            goto out;
+        for (uint64_t at = 0; at < vectors[v].bytes; at += PART_BYTES) {
+            uint64_t bytes_now = part_bytes(&vectors[v], at);
+            uint8_t *data = (uint8_t *)vectors[v].data + at;
+            if ((status = read_hashed(descriptor, path, &offset, running, data, bytes_now)))
+                goto out;
+            windrow_solver_release(solver, data, bytes_now);
+        }
     if ((status = windrow_file_read_at(descriptor, path, &stored, sizeof stored, offset)))
         goto out;
     if (XXH3_64bits_digest(running) != checksum || stored != checksum) {

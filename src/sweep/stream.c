@@ -10,6 +10,7 @@ struct place {
 
 struct windrow_streamer {
     const struct windrow_web *web;
+    const struct windrow_web *read_web;                 /* that blocks are read from now */
     struct windrow_crew *crew;
     struct windrow_kernel *kernels;                     /* one a worker */
     struct place places[2][WINDROW_WAVE_BLOCKS_MOST];   /* this wave's and the next one's */
@@ -59,7 +60,7 @@ unsigned windrow_streamer_wave_blocks(const struct windrow_streamer *streamer, e
 
 static enum windrow_status read_place(struct windrow_streamer *streamer, uint64_t block, struct place *place)
 {
-    return streamer->web->read(streamer->web->context, streamer->kind, block, &place->reader, &place->block);
+    return streamer->read_web->read(streamer->read_web->context, streamer->kind, block, &place->reader, &place->block);
 }
 
 static enum windrow_status read_task(void *context, uint64_t task, unsigned worker)
@@ -80,29 +81,35 @@ static enum windrow_status wave_task(void *context, uint64_t task, unsigned work
     uint64_t block = streamer->first + task;
     struct windrow_kernel *kernel = &streamer->kernels[worker];
     enum windrow_status status = windrow_kernel_load(kernel, &streamer->places[streamer->side][task].block,
-                                                     streamer->web->record(streamer->web->context, streamer->kind, block));
+                                                     streamer->read_web->record(streamer->read_web->context, streamer->kind, block));
     return status ? status : streamer->job->work(streamer->job->context, block, (unsigned)task, kernel, worker);
 }
 
 enum windrow_status windrow_streamer_run(struct windrow_streamer *streamer, enum windrow_block_kind kind, uint64_t first,
                                          const struct windrow_stream_job *job)
 {
-    uint64_t blocks = streamer->web->block_count[kind];
+    return windrow_streamer_run_part(streamer, streamer->web, kind, first, streamer->web->block_count[kind], job);
+}
+
+enum windrow_status windrow_streamer_run_part(struct windrow_streamer *streamer, const struct windrow_web *web, enum windrow_block_kind kind,
+                                              uint64_t first, uint64_t end, const struct windrow_stream_job *job)
+{
     unsigned most = windrow_streamer_wave_blocks(streamer, kind);
-    if (first >= blocks)
+    if (first >= end)
         return WINDROW_OK;
+    streamer->read_web = web;
     streamer->kind = kind;
     streamer->job = job;
     streamer->first = first;
-    streamer->count = blocks - first < most ? (unsigned)(blocks - first) : most;
+    streamer->count = end - first < most ? (unsigned)(end - first) : most;
     enum windrow_status status = windrow_crew_run(streamer->crew, streamer->count, read_task, streamer);
     while (!status) {
         uint64_t next = streamer->first + streamer->count;
-        streamer->next_count = blocks - next < most ? (unsigned)(blocks - next) : most;
+        streamer->next_count = end - next < most ? (unsigned)(end - next) : most;
         status = windrow_crew_run(streamer->crew, (uint64_t)streamer->count + streamer->next_count, wave_task, streamer);
         if (!status)
             status = job->barrier(job->context, streamer->first, next);
-        if (next == blocks)
+        if (next == end)
             break;
         streamer->first = next;
         streamer->count = streamer->next_count;

@@ -36,4 +36,8 @@ unsigned windrow_streamer_wave_blocks(const struct windrow_streamer *streamer, e
 enum windrow_status windrow_streamer_run(struct windrow_streamer *streamer, enum windrow_block_kind kind, uint64_t first,
                                          const struct windrow_stream_job *job);
 
+/* The same for the blocks [first, end), of another web with the same blocks (tiles.h): waves begin at `first`. */
+enum windrow_status windrow_streamer_run_part(struct windrow_streamer *streamer, const struct windrow_web *web, enum windrow_block_kind kind,
+                                              uint64_t first, uint64_t end, const struct windrow_stream_job *job);
+
 #endif

@@ -1,5 +1,19 @@
 #include "sweep/web.h"
 
+#include <sys/mman.h>
+#include <unistd.h>
+
+/* Pages at the ends are let go of whole: they come back too. */
+static void release_mapped(const void *memory, uint64_t bytes)
+{
+    uintptr_t page = (uintptr_t)sysconf(_SC_PAGESIZE), first = (uintptr_t)memory / page * page, end = ((uintptr_t)memory + bytes + page - 1) / page * page;
+    if (bytes)
+        madvise((void *)first, end - first, MADV_DONTNEED);
+}
+
+/* Degrees that are looked at between two releases. */
+enum { RELEASE_PAGES = 1 << 20 };
+
 static uint64_t store_host_first_core(const void *context, uint64_t host)
 {
     return windrow_store_host(context, host).first_core;
@@ -31,6 +45,7 @@ void windrow_web_of_store(const struct windrow_store *store, struct windrow_web 
         .host_first_core = store_host_first_core,
         .record = store_record,
         .read = store_read,
+        .release = release_mapped,
     };
 }
 
@@ -80,9 +95,15 @@ enum windrow_status windrow_web_check(const struct windrow_web *web)
                                 (unsigned long long)host);
         before = first;
     }
-    for (uint64_t core = 0; core < web->core_pages; core++)
+    for (uint64_t core = 0, kept = 0; core < web->core_pages; core++) {
+        if (web->release && (core - kept == RELEASE_PAGES || core + 1 == web->core_pages)) {
+            web->release(web->degrees + kept, (core - kept) * sizeof *web->degrees);
+            web->release(web->inside_degrees + kept, (core - kept) * sizeof *web->inside_degrees);
+            kept = core;
+        }
         if (web->degrees[core] == 0 || web->inside_degrees[core] > web->degrees[core])
             return windrow_fail(WINDROW_DAMAGED, "core page %llu has impossible degrees; run `windrow verify` on the store",
                                 (unsigned long long)core);
+    }
     return WINDROW_OK;
 }

@@ -26,6 +26,9 @@ struct windrow_web {
     /* The block is valid until the reader's next use. */
     enum windrow_status (*read)(const void *context, enum windrow_block_kind kind, uint64_t block,
                                 struct windrow_block_reader *reader, struct windrow_block *out);
+    /* Lets go of the memory of a stretch of the degrees, which come back from their file when they are looked at again.
+     * NULL: they are no mapped file. */
+    void (*release)(const void *memory, uint64_t bytes);
 };
 
 /* The store must stay open as long as the web is used. */

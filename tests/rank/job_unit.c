@@ -244,7 +244,7 @@ static void too_many_digits_give_the_best_there_is(void **state)
     windrow_run_close(run);
     windrow_store_close(store);
     options = options_for(room, "small", 6);
-    options.memory_bytes = 1 << 20;
+    options.memory_bytes = 1 << 10;
     assert_int_equal(windrow_rank(&options, NULL), WINDROW_RESOURCE);
     assert_non_null(strstr(windrow_message(), "--memory"));
 }
