@@ -6,9 +6,10 @@
 #include <string.h>
 #include <zstd.h>
 
-enum { BATCH_BLOCKS = 16, FILES_MOST = 2 * WINDROW_STRIPES_MOST + 1 };
+/* Blocks cut at a time: each takes some MiB, and memory is what is short here. */
+enum { BATCH_BLOCKS = 4, FILES_MOST = 2 * WINDROW_STRIPES_MOST + 1 };
 
-/* What a worker needs to cut a block. */
+/* What it takes to cut a block. */
 struct cutter {
     ZSTD_CCtx *compressor;
     struct windrow_block_reader reader;
@@ -31,7 +32,7 @@ struct build {
     enum windrow_block_kind kind;
     uint64_t first;                                 /* block of the batch */
     struct cut cuts[BATCH_BLOCKS];
-    struct cutter *cutters;                         /* one a worker */
+    struct cutter cutters[BATCH_BLOCKS];
     struct windrow_writer writers[FILES_MOST];
     struct windrow_block_record *records[FILES_MOST];
 };
@@ -131,9 +132,10 @@ static enum windrow_status make_frame(const struct build *build, struct cutter *
 
 static enum windrow_status cut_task(void *context, uint64_t task, unsigned worker)
 {
+    (void)worker;
     struct build *build = context;
     const struct windrow_web *web = build->web;
-    struct cutter *cutter = &build->cutters[worker];
+    struct cutter *cutter = &build->cutters[task];
     struct cut *out = &build->cuts[task];
     uint64_t block = build->first + task, links;
     const struct windrow_block_record *record = web->record(web->context, build->kind, block);
@@ -226,7 +228,7 @@ static enum windrow_status write_index(const char *directory, struct windrow_buf
     return status ? status : windrow_directory_sync(directory);
 }
 
-static enum windrow_status begin(struct build *build, const char *directory, uint64_t fingerprint, unsigned workers, struct windrow_buffer *index)
+static enum windrow_status begin(struct build *build, const char *directory, uint64_t fingerprint, struct windrow_buffer *index)
 {
     const struct windrow_web *web = build->web;
     unsigned stripes = build->stripes->count;
@@ -234,10 +236,7 @@ static enum windrow_status begin(struct build *build, const char *directory, uin
     const struct windrow_tiles_header header = {.magic = WINDROW_TILES_MAGIC, .stripes = stripes, .core_blocks = core_blocks,
                                                 .rim_blocks = rim_blocks, .fingerprint = fingerprint};
     uint64_t record_bytes = windrow_tiles_memory_bytes(web, stripes);
-    build->cutters = calloc(workers, sizeof *build->cutters);
-    enum windrow_status status = build->cutters ? WINDROW_OK : windrow_fail(WINDROW_RESOURCE, "out of memory while writing tiles");
-    if (!status)
-        status = windrow_buffer_append(index, &header, sizeof header);
+    enum windrow_status status = windrow_buffer_append(index, &header, sizeof header);
     if (!status)
         status = windrow_buffer_append(index, build->stripes->first_block, (stripes + 1) * sizeof(uint64_t));
     if (!status)
@@ -259,13 +258,12 @@ static enum windrow_status begin(struct build *build, const char *directory, uin
     return WINDROW_OK;
 }
 
-static void build_free(struct build *build, unsigned workers)
+static void build_free(struct build *build)
 {
-    for (int i = 0; i < BATCH_BLOCKS; i++)
+    for (int i = 0; i < BATCH_BLOCKS; i++) {
+        struct cutter *cutter = &build->cutters[i];
         for (int stripe = 0; stripe < WINDROW_STRIPES_MOST; stripe++)
             windrow_buffer_free(&build->cuts[i].frames[stripe]);
-    for (unsigned worker = 0; build->cutters && worker < workers; worker++) {
-        struct cutter *cutter = &build->cutters[worker];
         ZSTD_freeCCtx(cutter->compressor);
         windrow_block_reader_free(&cutter->reader);
         windrow_lists_free(&cutter->lists);
@@ -276,7 +274,6 @@ static void build_free(struct build *build, unsigned workers)
     }
     for (int file = 0; file < FILES_MOST; file++)
         windrow_writer_abandon(&build->writers[file]);
-    free(build->cutters);
     free(build);
 }
 
@@ -292,7 +289,7 @@ enum windrow_status windrow_tiles_build(const struct windrow_web *web, struct wi
     build->meter = meter;
     for (int file = 0; file < FILES_MOST; file++)
         build->writers[file].descriptor = -1;
-    enum windrow_status status = begin(build, directory, fingerprint, windrow_crew_workers(crew), &index);
+    enum windrow_status status = begin(build, directory, fingerprint, &index);
     for (int kind = 0; !status && kind < WINDROW_BLOCK_KINDS; kind++)
         status = cut_kind(build, kind, crew);
     uint64_t frame_bytes = 0;
@@ -303,6 +300,6 @@ enum windrow_status windrow_tiles_build(const struct windrow_web *web, struct wi
     if (!status)
         status = write_index(directory, &index, frame_bytes, checksum);
     windrow_buffer_free(&index);
-    build_free(build, windrow_crew_workers(crew));
+    build_free(build);
     return status;
 }
