@@ -271,7 +271,7 @@ struct windrow_standing {
     enum windrow_state state;
     const char *stage;          /* of a store that is not whole yet: what is, or was, being done; else NULL */
     double stage_share;         /* how much of that stage is done, 0 to 1; negative: unknown */
-    bool sharded;               /* the store is whole: the next eight lines are known */
+    bool sharded;               /* the store is whole: the next eleven lines are known */
     uint64_t pages;
     uint64_t crawled_pages;
     uint64_t dangling_pages;
@@ -280,6 +280,9 @@ struct windrow_standing {
     uint64_t core_pages;
     uint64_t core_links;
     uint64_t dropped[WINDROW_DROP_COUNT];
+    uint64_t aliases;           /* URLs that stand for another, by --aliases; of its lines that were of no use; of cycles cut */
+    uint64_t alias_bad_lines;
+    uint64_t alias_cycles;
     bool begun;                 /* there is a run: the next two lines are known */
     uint64_t sweeps;            /* all passes over the core */
     uint64_t link_visits;       /* all passes counted */

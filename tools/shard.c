@@ -79,7 +79,7 @@ static void summarise(const char *store, bool already_done)
     if (windrow_standing_read(store, NULL, &standing) || !standing.sharded)
         return;
     if (already_done)
-        talk("shard", "%s is already sharded from these dumps; nothing was done", store);
+        talk("shard", "%s is already sharded from dumps of these names; nothing was read", store);
     talk("shard", "%s: %s pages (%s crawled) on %s hosts, %s links", store, grouped(standing.pages), grouped(standing.crawled_pages),
          grouped(standing.hosts), grouped(standing.links));
     char line[256];
@@ -88,6 +88,9 @@ static void summarise(const char *store, bool already_done)
         if (standing.dropped[i] && used < sizeof line)
             used += (size_t)snprintf(line + used, sizeof line - used, "%s%s %s", used ? ", " : "", grouped(standing.dropped[i]), windrow_drop_names[i]);
     talk("shard", "links dropped: %s", used ? line : "none");
+    if (standing.aliases || standing.alias_bad_lines)
+        talk("shard", "aliases: %s folded, %s cycles cut, %s lines of no use", grouped(standing.aliases), grouped(standing.alias_cycles),
+             grouped(standing.alias_bad_lines));
 }
 
 static uint64_t mebibytes(double bytes)

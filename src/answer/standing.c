@@ -87,6 +87,9 @@ enum windrow_status windrow_standing_read(const char *path, const char *run_name
         standing->peak_memory_bytes = job.peak_memory_bytes;
         for (int i = 0; i < WINDROW_DROP_COUNT; i++)
             standing->dropped[i] = job.dropped[i];
+        standing->aliases = job.aliases;
+        standing->alias_bad_lines = job.alias_bad_lines;
+        standing->alias_cycles = job.alias_cycles;
     }
     status = windrow_run_open(store, run_name, &run);
     if (!status)

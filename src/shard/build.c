@@ -285,7 +285,8 @@ static enum windrow_status read_dumps(struct job *job)
         status = WINDROW_OK;
     if (!status && !job->reading.finished && job->options->dump_count) {
         struct windrow_reading reading = {.options = job->options, .fold = &job->fold, .scratch = job->scratch, .log_path = job->log_path,
-                                          .ledger = job->ledger, .crew = job->crew, .meter = &job->meter, .memory_bytes = job->memory_bytes};
+                                          .ledger = job->ledger, .crew = job->crew, .meter = &job->meter, .memory_bytes = job->memory_bytes,
+                                          .merge_memory_bytes = job->memory_bytes};
         windrow_meter_stage(&job->meter, "reading dumps", "URLs", 0);
         status = windrow_reading_run(&reading, &job->reading);
         windrow_meter_stage_end(&job->meter);
@@ -556,15 +557,35 @@ static uint64_t settings_fingerprint(const struct windrow_shard_options *options
     return XXH3_64bits_withSeed(&fold_fingerprint, sizeof fold_fingerprint, sum);
 }
 
+/* The scratch of a job stays where it began. */
+static enum windrow_status check_scratch(struct job *job)
+{
+    uint64_t now = XXH3_64bits(job->scratch, strlen(job->scratch)), then;
+    enum windrow_status status = windrow_ledger_get(job->ledger, "scratch", &then, sizeof then);
+    if (status == WINDROW_NO) {
+        struct windrow_ledger_record record = {"scratch", &now, sizeof now};
+        return windrow_ledger_commit(job->ledger, &record, 1);
+    }
+    bool finished = false;
+    if (!status)
+        status = windrow_job_finished(job->ledger, &finished);
+    if (!status && now != then && !finished)
+        status = windrow_fail(WINDROW_USAGE, "%s was begun with its scratch files elsewhere; go on with the --tmp of then (or without, as then)", job->store);
+    return status;
+}
+
 static enum windrow_status check_settings(struct job *job)
 {
     uint64_t now = settings_fingerprint(job->options, job->fold_fingerprint, job->old), then;
     enum windrow_status status = windrow_ledger_get(job->ledger, "settings", &then, sizeof then);
     if (status == WINDROW_NO) {
         struct windrow_ledger_record record = {"settings", &now, sizeof now};
-        return windrow_ledger_commit(job->ledger, &record, 1);
+        status = windrow_ledger_commit(job->ledger, &record, 1);
+        return status ? status : check_scratch(job);
     }
-    if (!status && now != then)
+    if (!status && now == then)
+        return check_scratch(job);
+    if (!status)
         status = windrow_fail(WINDROW_USAGE, "%s was begun from other dumps or with other settings (--shape, --nofollow, --names, --aliases, --drop, --add); name another --out, "
                                              "or remove it first", job->store);
     return status;

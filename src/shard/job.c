@@ -83,6 +83,14 @@ enum windrow_status windrow_job_status(const char *store, struct windrow_job_sta
     status = windrow_ledger_get(ledger, "reading", &out->reading, sizeof out->reading);
     if (status == WINDROW_NO)
         status = WINDROW_OK;
+    struct windrow_alias_facts aliases;
+    if (!status && !(status = windrow_ledger_get(ledger, "aliases", &aliases, sizeof aliases))) {
+        out->aliases = aliases.count;
+        out->alias_bad_lines = aliases.bad_lines;
+        out->alias_cycles = aliases.cycles;
+    } else if (status == WINDROW_NO) {
+        status = WINDROW_OK;
+    }
     for (int stage = WINDROW_JOB_PAGES; !status && stage <= WINDROW_JOB_LINKS; stage++) {
         uint64_t count = 0;
         status = windrow_ledger_each(ledger, marks[stage], count_one, &count);

@@ -17,6 +17,7 @@ struct windrow_job_status {
     double share;                          /* of the stage, 0 to 1; negative: unknown */
     double seconds_left;                   /* of the whole job, were it going on; negative: unknown */
     uint64_t dropped[WINDROW_DROP_COUNT];  /* of the finished job: the links of its dumps that were left out, by reason */
+    uint64_t aliases, alias_bad_lines, alias_cycles; /* of --aliases; 0 without */
     double elapsed_seconds;                /* of the finished job, its last process alone */
     uint64_t peak_memory_bytes;            /* likewise */
 };

@@ -1,12 +1,14 @@
 #include "shard/reading.h"
 
 #include "shard/batch.h"
+#include "shard/linkmerge.h"
 #include "url/keyer.h"
 
 #include <pthread.h>
 #include <stdio.h>
 #include <stdlib.h>
 #include <string.h>
+#include <time.h>
 
 #define SAMPLES_MOST 1000          /* malformed lines kept for the log, of the whole job */
 #define SAMPLE_TEXT_BYTES 200
@@ -39,6 +41,7 @@ struct reader {
     bool ended;
     bool write_now;
     double batch_began;
+    char first_sample[256];        /* the first malformed line of this process, as the log has it */
     double began, seconds_before;  /* of reading; by earlier processes */
     uint64_t fields, bad_fields;   /* of the whole job, for the share */
     struct worker *workers;
@@ -64,7 +67,23 @@ static enum windrow_status sample(struct reader *reader, struct worker *worker, 
             snprintf(escaped, sizeof escaped, "%c", byte);
         status = windrow_buffer_append(&worker->samples, escaped, strlen(escaped));
     }
-    return status ? status : windrow_buffer_append(&worker->samples, "\n", 1);
+    if (!status)
+        status = windrow_buffer_append(&worker->samples, "\n", 1);
+    pthread_mutex_lock(&reader->lock);
+    if (!status && !reader->first_sample[0]) {
+        size_t begin = worker->samples.bytes - 1;
+        while (begin && worker->samples.data[begin - 1] != '\n')
+            begin--;
+        size_t line_bytes = worker->samples.bytes - 1 - begin;
+        if (line_bytes >= sizeof reader->first_sample)
+            line_bytes = sizeof reader->first_sample - 1;
+        memcpy(reader->first_sample, worker->samples.data + begin, line_bytes);
+        for (size_t byte = 0; byte < line_bytes; byte++)
+            if (reader->first_sample[byte] == '\t')
+                reader->first_sample[byte] = ' ';
+    }
+    pthread_mutex_unlock(&reader->lock);
+    return status;
 }
 
 /* The key of a number in a dump of ids. */
@@ -197,8 +216,24 @@ static enum windrow_status check_share(const struct reader *reader)
     if ((double)reader->bad_fields <= most * (double)reader->fields)
         return WINDROW_OK;
     reader->state->hopeless = 1;
-    return windrow_fail(WINDROW_INPUT, "%llu of %llu URL fields are malformed, more than --bad-max %g allows; is --shape right? Samples: %s",
-                        (unsigned long long)reader->bad_fields, (unsigned long long)reader->fields, most, reader->reading->log_path);
+    return windrow_fail(WINDROW_INPUT, "%llu of %llu URL fields are malformed, more than --bad-max %g allows; is --shape right? The first: %s",
+                        (unsigned long long)reader->bad_fields, (unsigned long long)reader->fields, most, reader->first_sample);
+}
+
+/* True when what was read last is not to be trusted: a Ctrl-C at a terminal stops the program at the other end of the pipe,
+ * too, so that the stream ends early, perhaps within a line. What is left out here is read again by the job that goes on.
+ * The other program may die a moment before we hear of the signal; so an end is looked at twice. */
+static bool cut_short(const struct reader *reader, const struct windrow_dump_chunk *chunk)
+{
+    const struct windrow_shard_options *options = reader->reading->options;
+    bool from_pipe = false;
+    for (size_t dump = 0; dump < options->dump_count; dump++)
+        from_pipe |= strcmp(options->dumps[dump], "-") == 0;
+    if (!from_pipe)
+        return false;
+    if (!windrow_meter_stopping(reader->reading->meter) && (!chunk->bytes || chunk->text[chunk->bytes - 1] != '\n'))
+        nanosleep(&(struct timespec){.tv_nsec = 50000000}, NULL);
+    return windrow_meter_stopping(reader->reading->meter);
 }
 
 /* Takes the next chunk; *got is false when this worker should stop reading. */
@@ -211,7 +246,9 @@ static enum windrow_status next_chunk(struct reader *reader, struct worker *work
         reader->write_now = true;
     if (!reader->ended && !reader->write_now) {
         status = windrow_dump_read(reader->dump, &worker->chunk);
-        if (!status && worker->chunk.bytes) {
+        if (!status && cut_short(reader, &worker->chunk)) {
+            reader->write_now = true;
+        } else if (!status && worker->chunk.bytes) {
             *got = true;
             reader->position = worker->chunk.end;
         } else if (!status) {
@@ -348,6 +385,13 @@ static enum windrow_status commit(struct reader *reader, unsigned workers)
     state->seconds = reader->seconds_before + windrow_seconds() - reader->began;
     state->position = reader->position;
     state->finished = reader->ended;
+    /* The merges keep a frame of every run in memory: better to know now than when everything has been read. */
+    uint64_t most = reader->reading->merge_memory_bytes;
+    if (!status && most && windrow_linkmerge_memory_bytes(state->run_count) > most)
+        status = windrow_fail(WINDROW_RESOURCE, "this memory holds too small a batch for dumps of this size: %llu batches so far, and merging them takes "
+                                                "%llu MiB; run the same command again with a --memory of %llu MiB or more",
+                              (unsigned long long)state->run_count, (unsigned long long)(windrow_linkmerge_memory_bytes(state->run_count) >> 20) + 1,
+                              (unsigned long long)(most >> 19));
     if (!status) {
         records[count] = (struct windrow_ledger_record){"reading", state, sizeof *state};
         status = windrow_ledger_commit(reader->reading->ledger, records, count + 1);

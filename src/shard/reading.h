@@ -41,6 +41,7 @@ struct windrow_reading {
     struct windrow_crew *crew;
     struct windrow_meter *meter;
     uint64_t memory_bytes;              /* for all batches together */
+    uint64_t merge_memory_bytes;        /* for the merges that follow; 0: whatever they take */
 };
 
 /* Of each run the ledger's record "run/NNNNNN" holds its pages (uint64_t). */

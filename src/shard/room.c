@@ -2,6 +2,7 @@
 #include "windrow.h"
 
 #include "base/file.h"
+#include "dump/paths.h"
 #include "store/store.h"
 
 #include <stdlib.h>
@@ -85,9 +86,8 @@ static enum windrow_status compare(const struct windrow_shard_options *options, 
     return WINDROW_OK;
 }
 
-enum windrow_status windrow_shard_check_disk(const struct windrow_shard_options *options, struct windrow_plan *plan)
+static enum windrow_status check(const struct windrow_shard_options *options, struct windrow_plan *plan)
 {
-    *plan = (struct windrow_plan){0};
     uint64_t bytes;
     if (!options->out || windrow_file_exists(options->out) || !dump_bytes(options, &bytes))
         return WINDROW_OK;
@@ -103,5 +103,19 @@ enum windrow_status windrow_shard_check_disk(const struct windrow_shard_options 
     }
     free(out);
     free(temporary);
+    return status;
+}
+
+enum windrow_status windrow_shard_check_disk(const struct windrow_shard_options *options, struct windrow_plan *plan)
+{
+    *plan = (struct windrow_plan){0};
+    struct windrow_dump_paths paths = {0};
+    enum windrow_status status = windrow_dump_paths_expand(options->dumps, options->dump_count, &paths);
+    struct windrow_shard_options expanded = *options;
+    expanded.dumps = (const char *const *)paths.paths;
+    expanded.dump_count = paths.count;
+    /* What cannot be expanded, the job itself will say. */
+    status = status ? WINDROW_OK : check(&expanded, plan);
+    windrow_dump_paths_free(&paths);
     return status;
 }

@@ -220,6 +220,15 @@ enum windrow_status windrow_ledger_verify(const char *directory)
         status = windrow_fail(WINDROW_DAMAGED, "%s has %lld bytes, which are not whole pages: it was cut", data, (long long)facts.st_size);
     if (!status)
         status = windrow_ledger_open(directory, true, &ledger);
+    if (!status) {
+        /* LMDB knows the last page that it ever took. A page or two at the end may never have been written, when they were
+         * given back within their own transaction. */
+        MDB_envinfo info;
+        mdb_env_info(ledger->environment, &info);
+        if ((uint64_t)facts.st_size / (uint64_t)sysconf(_SC_PAGESIZE) + 2 < info.me_last_pgno + 1)
+            status = windrow_fail(WINDROW_DAMAGED, "%s has %lld bytes and should have %llu pages: it was cut", data, (long long)facts.st_size,
+                                  (unsigned long long)info.me_last_pgno + 1);
+    }
     if (!status)
         status = windrow_ledger_each(ledger, "", pass, NULL);
     windrow_ledger_close(ledger);

@@ -225,6 +225,38 @@ static void test_state_of_a_dead_job(void **state)
     assert_true(seen);
 }
 
+/* Ctrl-C at a terminal reaches both ends of a pipe: the stream ends early, and that must not be taken for its end. */
+static void test_stopped_pipe(void **state)
+{
+    const struct room *room = *state;
+    char *whole = scratch_path(room->directory, "whole"), *store = scratch_path(room->directory, "piped");
+    char *windrow = memory_text("%s/windrow", program_build_directory()), *crawlgen = memory_text("%s/crawlgen", program_build_directory());
+    char *stream = memory_text("%s --links 2M --seed 9", crawlgen);
+    char *all = memory_text("%s | %s shard --quiet --memory 64M --out %s -", stream, windrow, whole);
+    MUST("bash", "-c", all);
+    unsigned stops = 0;
+    for (int round = 0; round < 12 && stops < 3; round++) {
+        char *stopped = memory_text("set -m; %s | %s shard --quiet --memory 64M --out %s - & sleep 0.%d; kill -INT -- -$!; wait $!", stream, windrow,
+                                    store, 1 + round % 9);
+        char *again = memory_text("%s | %s shard --quiet --memory 64M --out %s -", stream, windrow, store);
+        struct outcome outcome = RUN("bash", "-c", stopped);
+        stops += outcome.exit_code == 6;
+        outcome_free(&outcome);
+        MUST("bash", "-c", again);
+        scratch_expect_same_store(whole, store);
+        MUST("rm", "-r", store);
+        free(stopped);
+        free(again);
+    }
+    assert_true(stops > 0);
+    free(whole);
+    free(store);
+    free(windrow);
+    free(crawlgen);
+    free(stream);
+    free(all);
+}
+
 int main(void)
 {
     const struct CMUnitTest tests[] = {
@@ -232,6 +264,7 @@ int main(void)
         cmocka_unit_test(test_killed_shard_of_a_stream),
         cmocka_unit_test(test_killed_rank),
         cmocka_unit_test(test_stopped_shard),
+        cmocka_unit_test(test_stopped_pipe),
         cmocka_unit_test(test_stopped_rank),
         cmocka_unit_test(test_state_of_a_dead_job),
     };
