@@ -9,6 +9,7 @@
 #include <fcntl.h>
 #include <stdlib.h>
 #include <string.h>
+#include <sys/mman.h>
 
 static enum windrow_status memory(void)
 {
@@ -353,6 +354,9 @@ enum windrow_status windrow_linkmerge_segment(const struct windrow_linkmerge *me
     if ((status = windrow_writer_seal(&merging.corrections)) || (status = windrow_writer_finish(&merging.corrections, NULL)))
         goto out;
     status = write_head(&merging);
+    /* What was read of the mapped tables counts as resident until it is let go; others that still need a page get it again. */
+    madvise((void *)merge->hosts, (merge->host_count + 1) * sizeof *merge->hosts, MADV_DONTNEED);
+    madvise((void *)merge->core_groups, (merge->pages / WINDROW_CORE_GROUP_PAGES + 1) * sizeof *merge->core_groups, MADV_DONTNEED);
 out:
     if (merging.readers)
         for (uint64_t run = 0; run < runs; run++)

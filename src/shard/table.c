@@ -7,6 +7,8 @@
 #include "url/domain.h"
 #include "url/key.h"
 
+#include <errno.h>
+#include <fcntl.h>
 #include <stdlib.h>
 #include <string.h>
 
@@ -14,8 +16,6 @@
  *   struct table_head
  *   struct windrow_pages_mark …      mark_count, key_at from 0
  *   first keys                       first_key_bytes
- *   struct windrow_host_record …     host_count hosts that begin in this segment; first_core and name_at from 0
- *   host names                       host_name_bytes
  *   struct windrow_core_group …      group_count; ranks 0
  *   uint32_t …                       core_pages out-degrees
  */
@@ -92,7 +92,8 @@ static enum windrow_status walk_next(struct walk *walk)
 struct segment {
     struct table_head head;
     struct windrow_pages_writer pages;
-    struct windrow_buffer hosts, host_names, groups, degrees;
+    struct windrow_writer hosts, host_names;
+    struct windrow_buffer groups, degrees;
 };
 
 static enum windrow_status add_host(struct segment *segment, uint64_t page, const struct windrow_buffer *key)
@@ -102,12 +103,12 @@ static enum windrow_status add_host(struct segment *segment, uint64_t page, cons
     if (!text)
         return memory();
     size_t bytes = windrow_key_host((const char *)key->data, key->bytes, text, key->bytes + 2);
-    struct windrow_host_record record = {.first_page = page, .first_core = segment->head.core_pages, .name_at = segment->host_names.bytes,
+    struct windrow_host_record record = {.first_page = page, .first_core = segment->head.core_pages, .name_at = segment->host_names.written_bytes,
                                          .name_bytes = (uint32_t)bytes,
                                          .domain_bytes = (uint32_t)(bytes - (size_t)(windrow_domain(text) - text))};
-    status = windrow_buffer_append(&segment->hosts, &record, sizeof record);
+    status = windrow_writer_append(&segment->hosts, &record, sizeof record);
     if (!status)
-        status = windrow_buffer_append(&segment->host_names, text, bytes);
+        status = windrow_writer_append(&segment->host_names, text, bytes);
     segment->head.host_count++;
     free(text);
     return status;
@@ -150,11 +151,9 @@ static enum windrow_status write_table(const char *path, struct segment *segment
     enum windrow_status status = windrow_writer_open(&writer, path, true);
     segment->head.mark_count = segment->pages.marks.bytes / sizeof(struct windrow_pages_mark);
     segment->head.first_key_bytes = segment->pages.first_keys.bytes;
-    segment->head.host_name_bytes = segment->host_names.bytes;
     if (!status)
         status = windrow_writer_append(&writer, &segment->head, sizeof segment->head);
-    const struct windrow_buffer *parts[] = {&segment->pages.marks, &segment->pages.first_keys, &segment->hosts,
-                                            &segment->host_names,  &segment->groups,           &segment->degrees};
+    const struct windrow_buffer *parts[] = {&segment->pages.marks, &segment->pages.first_keys, &segment->groups, &segment->degrees};
     for (size_t part = 0; !status && part < sizeof parts / sizeof *parts; part++)
         status = windrow_writer_append(&writer, parts[part]->data, parts[part]->bytes);
     if (!status)
@@ -169,12 +168,18 @@ enum windrow_status windrow_table_segment(const struct windrow_table_parts *part
 {
     uint64_t pages = parts->page_bases[parts->part_count], first = number * WINDROW_SEGMENT_PAGES;
     uint64_t end = first + WINDROW_SEGMENT_PAGES < pages ? first + WINDROW_SEGMENT_PAGES : pages;
-    struct segment segment = {.pages.file.descriptor = -1};
+    struct segment segment = {.pages.file.descriptor = -1, .hosts.descriptor = -1, .host_names.descriptor = -1};
     struct walk walk = {.reader.frames.descriptor = -1};
     struct windrow_buffer before = {0};
     char *page_path = windrow_path(store, "pages/%06llu.zst", (unsigned long long)number);
     char *table_path = windrow_path(parts->scratch, "segment-%06llu.table", (unsigned long long)number);
-    enum windrow_status status = page_path && table_path ? WINDROW_OK : memory();
+    char *host_path = windrow_path(parts->scratch, "segment-%06llu.hosts", (unsigned long long)number);
+    char *name_path = windrow_path(parts->scratch, "segment-%06llu.names", (unsigned long long)number);
+    enum windrow_status status = page_path && table_path && host_path && name_path ? WINDROW_OK : memory();
+    if (!status)
+        status = windrow_writer_open(&segment.hosts, host_path, true);
+    if (!status)
+        status = windrow_writer_open(&segment.host_names, name_path, true);
     if (!status)
         status = windrow_pages_writer_open(&segment.pages, page_path, first, false);
     /* The page before the segment tells whether a host begins with it. */
@@ -203,17 +208,24 @@ enum windrow_status windrow_table_segment(const struct windrow_table_parts *part
     }
     if (!status)
         status = windrow_pages_writer_finish(&segment.pages, &segment.head.file_bytes, &segment.head.file_checksum);
+    segment.head.host_name_bytes = segment.host_names.written_bytes;
+    if (!status && !(status = windrow_writer_seal(&segment.hosts)))
+        status = windrow_writer_finish(&segment.hosts, NULL);
+    if (!status && !(status = windrow_writer_seal(&segment.host_names)))
+        status = windrow_writer_finish(&segment.host_names, NULL);
     if (!status)
         status = write_table(table_path, &segment);
     windrow_keyrun_reader_close(&walk.reader);
     windrow_pages_writer_free(&segment.pages);
-    windrow_buffer_free(&segment.hosts);
-    windrow_buffer_free(&segment.host_names);
+    windrow_writer_abandon(&segment.hosts);
+    windrow_writer_abandon(&segment.host_names);
     windrow_buffer_free(&segment.groups);
     windrow_buffer_free(&segment.degrees);
     windrow_buffer_free(&before);
     free(page_path);
     free(table_path);
+    free(host_path);
+    free(name_path);
     return status;
 }
 
@@ -232,10 +244,39 @@ static enum windrow_status load_table(const char *scratch, uint64_t segment, str
         if (good)
             memcpy(head, bytes->data, sizeof *head);
         if (!good || bytes->bytes != sizeof *head + head->mark_count * sizeof(struct windrow_pages_mark) + head->first_key_bytes +
-                                         head->host_count * sizeof(struct windrow_host_record) + head->host_name_bytes +
                                          head->group_count * sizeof(struct windrow_core_group) + head->core_pages * sizeof(uint32_t))
             status = windrow_fail(WINDROW_DAMAGED, "the scratch file %s is damaged; remove the unfinished store and shard again", path);
     }
+    free(path);
+    return status;
+}
+
+/* Copies a segment's hosts or their names, a piece at a time: a segment may have as many hosts as pages. */
+static enum windrow_status copy_hosts(const char *scratch, uint64_t segment, const char *kind, uint64_t expected_bytes, struct windrow_writer *out,
+                                      uint64_t cores_before, uint64_t names_before)
+{
+    struct windrow_host_record block[4096];
+    bool records = strcmp(kind, "hosts") == 0;
+    uint64_t bytes;
+    char *path = windrow_path(scratch, "segment-%06llu.%s", (unsigned long long)segment, kind);
+    enum windrow_status status = path ? windrow_sealed_check(path, &bytes) : memory();
+    if (!status && bytes != expected_bytes)
+        status = windrow_fail(WINDROW_DAMAGED, "the scratch file %s is damaged; remove the unfinished store and shard again", path);
+    int descriptor = status ? -1 : windrow_files.open(path, O_RDONLY, 0);
+    if (!status && descriptor < 0)
+        status = windrow_fail_system(WINDROW_DAMAGED, errno, "cannot open the scratch file %s", path);
+    for (uint64_t at = 0; !status && at < expected_bytes; at += sizeof block) {
+        size_t part = expected_bytes - at < sizeof block ? (size_t)(expected_bytes - at) : sizeof block;
+        status = windrow_file_read_at(descriptor, path, block, part, at);
+        for (size_t index = 0; records && index < part / sizeof *block; index++) {
+            block[index].first_core += cores_before;
+            block[index].name_at += names_before;
+        }
+        if (!status)
+            status = windrow_writer_append(out, block, part);
+    }
+    if (descriptor >= 0)
+        windrow_files.close(descriptor);
     free(path);
     return status;
 }
@@ -244,7 +285,7 @@ static enum windrow_status assemble_segment(struct windrow_writer *out, const ui
                                             const struct windrow_table_totals *before)
 {
     enum windrow_status status = WINDROW_OK;
-    uint64_t keys_before = out[KEYS].written_bytes, names_before = out[NAMES].written_bytes;
+    uint64_t keys_before = out[KEYS].written_bytes;
     for (uint64_t index = 0; !status && index < head->mark_count; index++, at += sizeof(struct windrow_pages_mark)) {
         struct windrow_pages_mark mark;
         memcpy(&mark, at, sizeof mark);
@@ -254,16 +295,6 @@ static enum windrow_status assemble_segment(struct windrow_writer *out, const ui
     if (!status)
         status = windrow_writer_append(&out[KEYS], at, head->first_key_bytes);
     at += head->first_key_bytes;
-    for (uint64_t index = 0; !status && index < head->host_count; index++, at += sizeof(struct windrow_host_record)) {
-        struct windrow_host_record host;
-        memcpy(&host, at, sizeof host);
-        host.first_core += before->core_pages;
-        host.name_at += names_before;
-        status = windrow_writer_append(&out[HOSTS], &host, sizeof host);
-    }
-    if (!status)
-        status = windrow_writer_append(&out[NAMES], at, head->host_name_bytes);
-    at += head->host_name_bytes;
     uint64_t rank = before->core_pages;
     for (uint64_t index = 0; !status && index < head->group_count; index++, at += sizeof(struct windrow_core_group)) {
         struct windrow_core_group group;
@@ -296,7 +327,11 @@ enum windrow_status windrow_table_assemble(const char *scratch, const char *stor
         if ((status = load_table(scratch, segment, &table, &head)))
             break;
         segment_cores[segment] = totals->core_pages;
-        if ((status = assemble_segment(out, table.data + sizeof head, &head, totals)))
+        uint64_t names_before = out[NAMES].written_bytes;
+        if ((status = assemble_segment(out, table.data + sizeof head, &head, totals)) ||
+            (status = copy_hosts(scratch, segment, "hosts", head.host_count * sizeof(struct windrow_host_record), &out[HOSTS], totals->core_pages,
+                                 names_before)) ||
+            (status = copy_hosts(scratch, segment, "names", head.host_name_bytes, &out[NAMES], 0, 0)))
             break;
         totals->pages += head.pages;
         totals->core_pages += head.core_pages;

@@ -2,7 +2,9 @@
  *
  * Each segment of 2^20 page ids is written by itself, whichever parts its pages lie in, and leaves
  *   STORE/pages/N.zst    its frames of the page table
- *   segment-N.table      in the scratch directory: counts, index, hosts, core bits, out-degrees (see table.c)
+ *   segment-N.table      in the scratch directory: counts, index, core bits, out-degrees (see table.c)
+ *   segment-N.hosts      its hosts (struct windrow_host_record, first_core and name_at counting from the segment), sealed
+ *   segment-N.names      their names, sealed
  * windrow_table_assemble() then strings these together into the flat files of the store, adding what came
  * before each segment.
  */

@@ -10,6 +10,7 @@
 #include <fcntl.h>
 #include <stdlib.h>
 #include <string.h>
+#include <sys/mman.h>
 #include <xxhash.h>
 #include <zstd.h>
 
@@ -143,6 +144,9 @@ enum windrow_status windrow_store_open_manifest(const char *path, struct windrow
             goto out;
     if ((status = check_sizes(store)))
         goto out;
+    /* The check has touched every host: let the pages go, they come again when they are asked for. */
+    if (store->flats[HOSTS].bytes)
+        madvise((void *)store->flats[HOSTS].data, store->flats[HOSTS].bytes, MADV_DONTNEED);
     if ((status = windrow_pages_index_open(&store->flats[PAGE_INDEX], &store->flats[PAGE_KEYS], store->manifest.facts.pages, &store->pages)))
         goto out;
     if (store->flats[ALIAS_INDEX].bytes) {
