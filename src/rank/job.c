@@ -639,7 +639,11 @@ static enum windrow_status run_job(struct job *job, bool *already_done)
         forget_generation(job, job->certified.generation - 1);
     if (job->certified.generation && proves(job, &job->certified.certificate)) {
         *already_done = true;
-        return WINDROW_OK;
+        if (job->progress.finished)
+            return WINDROW_OK;
+        /* An earlier call asked for more and did not get it; this one is content. */
+        job->progress.finished = 1;
+        return commit(job, NULL, 0);
     }
     job->progress.finished = 0;
     windrow_web_of_store(job->store, &job->web);
