@@ -1,6 +1,6 @@
 /* table: from the merged parts to the store's page table, host table and core map.
  *
- * Each segment of 2^20 page ids is written by itself, whichever parts its pages lie in, and leaves
+ * Each segment of 2^18 page ids is written by itself, whichever parts its pages lie in, and leaves
  *   STORE/pages/N.zst    its frames of the page table
  *   segment-N.table      in the scratch directory: counts, index, core bits, out-degrees (see table.c)
  *   segment-N.hosts      its hosts (struct windrow_host_record, first_core and name_at counting from the segment), sealed

@@ -1,10 +1,13 @@
 #include "shard/variants.h"
 
+#include "base/crew.h"
+
 #include "shard/sorter.h"
 #include "store/layout.h"
 
 #include <errno.h>
 #include <stdio.h>
+#include <stdatomic.h>
 #include <stdlib.h>
 #include <string.h>
 #include <unistd.h>
@@ -254,26 +257,58 @@ static int number_order(const void *a, const void *b)
 }
 
 /* Counting alone needs no keys: what variants share by its hash, and in the hash's last three bits what each has. */
-static enum windrow_status count_only(struct finder *finder)
+struct counting {
+    struct finder *finder;
+    uint64_t pages, one_in;
+    uint64_t *hashes;
+    atomic_uint_fast64_t count;
+};
+#define COUNTING_PAGES 65536
+
+static enum windrow_status count_stretch(void *context, uint64_t task, unsigned worker)
 {
-    uint64_t pages = windrow_store_facts(finder->store)->pages, one_in = pages / COUNTED_MOST + 1, count = 0;
-    uint64_t *hashes = malloc((COUNTED_MOST * 5 / 4 + 1) * sizeof *hashes);
-    enum windrow_status status = hashes ? WINDROW_OK : windrow_fail(WINDROW_RESOURCE, "out of memory for counting variants");
-    for (uint64_t page = 0; !status && page < pages; page++) {
+    (void)worker;
+    struct counting *counting = context;
+    struct finder finder = {.store = counting->finder->store, .meter = counting->finder->meter};
+    uint64_t first = task * COUNTING_PAGES, end = first + COUNTING_PAGES < counting->pages ? first + COUNTING_PAGES : counting->pages;
+    enum windrow_status status = windrow_page_reader_create(finder.store, &finder.reader);
+    if (!status)
+        status = check_stop(&finder);
+    for (uint64_t page = first; !status && page < end; page++) {
         const uint8_t *key;
         size_t key_bytes;
         unsigned features;
-        if ((status = read_shared(finder, page, &key, &key_bytes, &features)))
+        if ((status = read_shared(&finder, page, &key, &key_bytes, &features)))
             break;
-        uint64_t hash = XXH3_64bits(finder->shared.data, finder->shared.bytes);
-        if (hash % one_in == 0 && count < COUNTED_MOST * 5 / 4)
-            hashes[count++] = (hash & ~UINT64_C(7)) | features;
-        if (finder->meter && (page + 1) % 4096 == 0)
-            windrow_meter_add(finder->meter, 4096);
-        if (page % 65536 == 0)
-            status = check_stop(finder);
+        uint64_t hash = XXH3_64bits(finder.shared.data, finder.shared.bytes);
+        if (hash % counting->one_in)
+            continue;
+        uint64_t at = atomic_fetch_add(&counting->count, 1);
+        if (at < COUNTED_MOST * 5 / 4)
+            counting->hashes[at] = (hash & ~UINT64_C(7)) | features;
     }
+    if (!status && finder.meter)
+        windrow_meter_add(finder.meter, end - first);
+    windrow_page_reader_destroy(finder.reader);
+    windrow_buffer_free(&finder.shared);
+    return status;
+}
+
+static enum windrow_status count_only(struct finder *finder)
+{
+    struct counting counting = {.finder = finder, .pages = windrow_store_facts(finder->store)->pages};
+    counting.one_in = counting.pages / COUNTED_MOST + 1;
+    counting.hashes = malloc((COUNTED_MOST * 5 / 4 + 1) * sizeof *counting.hashes);
+    struct windrow_crew *crew = NULL;
+    enum windrow_status status = counting.hashes ? windrow_crew_create(windrow_crew_default_workers(), &crew)
+                                                 : windrow_fail(WINDROW_RESOURCE, "out of memory for counting variants");
+    if (!status)
+        status = windrow_crew_run(crew, (counting.pages + COUNTING_PAGES - 1) / COUNTING_PAGES, count_stretch, &counting);
+    windrow_crew_destroy(crew);
     if (!status) {
+        uint64_t *hashes = counting.hashes, count = atomic_load(&counting.count);
+        if (count > COUNTED_MOST * 5 / 4)
+            count = COUNTED_MOST * 5 / 4;
         qsort(hashes, count, sizeof *hashes, number_order);
         /* The best of a group stands last. */
         for (uint64_t at = 0; at + 1 < count; at++) {
@@ -286,10 +321,10 @@ static enum windrow_status count_only(struct finder *finder)
         struct windrow_variant_counts *counts = finder->counts;
         uint64_t *const all[] = {&counts->pages, &counts->by_scheme, &counts->by_www, &counts->by_slash, &counts->by_several};
         for (size_t number = 0; number < sizeof all / sizeof all[0]; number++)
-            *all[number] *= one_in;
-        counts->one_in = one_in;
+            *all[number] *= counting.one_in;
+        counts->one_in = counting.one_in;
     }
-    free(hashes);
+    free(counting.hashes);
     return status;
 }
 

@@ -7,7 +7,7 @@
 #include <stdio.h>
 
 /* The unit of parallel merging and of resuming: so many consecutive page ids, a file of pages and of blocks each. */
-#define WINDROW_SEGMENT_PAGES (UINT64_C(1) << 20)
+#define WINDROW_SEGMENT_PAGES (UINT64_C(1) << 18)
 
 /* Which pages are core pages, and how many core pages stand before: one record for each 512 pages. */
 #define WINDROW_CORE_GROUP_PAGES 512
