@@ -164,6 +164,7 @@ struct windrow_plan {
     struct windrow_interval run_bytes;     /* what a run leaves beside the store */
     struct windrow_interval vector_bytes;  /* memory of the vectors while ranking */
     bool vectors_fit;                      /* all of them in memory_bytes, at the high end */
+    unsigned stripes;                      /* 1 when they fit; else the links are cut into stripes x stripes tiles; 0: too little memory */
     struct windrow_interval shard_seconds, sweep_seconds, rank_seconds; /* ranking to error_l1 1e-9 */
 };
 

@@ -159,7 +159,12 @@ static void print_plain(const struct request *request, const struct windrow_plan
     put_size(plan->vector_bytes.high);
     printf("); fit in --memory ");
     put_size((double)request->plan.memory_bytes);
-    printf(": %s\n", plan->vectors_fit ? "yes" : "no");
+    if (plan->vectors_fit)
+        printf(": yes, 1 tile\n");
+    else if (plan->stripes)
+        printf(": no, %u x %u tiles\n", plan->stripes, plan->stripes);
+    else
+        printf(": no, and it is too little for tiles\n");
     print_interval("time to shard", plan->shard_seconds, put_time, "");
     print_interval("a sweep", plan->sweep_seconds, put_time, "");
     print_interval("time to rank", plan->rank_seconds, put_time, ", to an error_l1 of 1e-9");
@@ -194,7 +199,7 @@ static enum windrow_status print_json(const struct windrow_plan *plan)
         {"vector_bytes", plan->vector_bytes, true}, {"shard_seconds", plan->shard_seconds, false}, {"sweep_seconds", plan->sweep_seconds, false},
         {"rank_seconds", plan->rank_seconds, false},
     };
-    json_t *object = json_pack("{s:s,s:f,s:b,s:{s:I,s:I,s:I,s:I}}", "basis", bases[plan->basis], "share", plan->share, "vectors_fit", plan->vectors_fit,
+    json_t *object = json_pack("{s:s,s:f,s:b,s:i,s:{s:I,s:I,s:I,s:I}}", "basis", bases[plan->basis], "share", plan->share, "vectors_fit", plan->vectors_fit, "stripes", (int)plan->stripes,
                                "variant_kinds", "scheme", (json_int_t)plan->variant_kinds.by_scheme, "www", (json_int_t)plan->variant_kinds.by_www,
                                "slash", (json_int_t)plan->variant_kinds.by_slash, "several", (json_int_t)plan->variant_kinds.by_several);
     int failed = !object;

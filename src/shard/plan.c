@@ -43,7 +43,13 @@ static const struct windrow_interval scratch_ratio = {1.1, 1.5, 1.8}, disk_ratio
 #define PAGE_BYTES_DOUBLING_MOST 0.08
 
 /* Ranking: memory of all vectors that a run keeps, a core page. */
-#define VECTOR_CORE_PAGE_BYTES 40.0
+#define VECTOR_CORE_PAGE_BYTES 52.0
+#define VECTOR_RIM_PAGE_BYTES 8.0
+/* Of the stripe that is swept, when the vectors do not fit: of each of its core pages; and what all of the store keeps mapped. */
+#define STRIPE_PAGE_BYTES 28.0
+#define MAPPED_HOST_BYTES 41.0
+#define MAPPED_PAGE_BYTES (1.0 / 3)
+#define STRIPES_MOST 64
 /* Files of a run: 44 bytes a core page, 16 a page (78.6 MB and 22.4 MB for the two larger crawls). */
 #define RUN_CORE_PAGE_BYTES 44.0
 #define RUN_PAGE_BYTES 16.0
@@ -307,6 +313,21 @@ static enum windrow_status plan_counts(struct windrow_plan *plan, struct windrow
     return WINDROW_OK;
 }
 
+static double vector_bytes(double pages, double core_pages)
+{
+    return core_pages * VECTOR_CORE_PAGE_BYTES + (pages - core_pages) * VECTOR_RIM_PAGE_BYTES;
+}
+
+/* The fewest stripes whose working set fits; 0: the memory is too small for any. */
+static unsigned stripes_for(const struct windrow_plan *plan, double memory_bytes)
+{
+    double mapped = plan->hosts.point * MAPPED_HOST_BYTES + plan->pages.point * MAPPED_PAGE_BYTES;
+    for (unsigned stripes = 2; stripes <= STRIPES_MOST; stripes++)
+        if (plan->core_pages.point * STRIPE_PAGE_BYTES / stripes + mapped <= memory_bytes)
+            return stripes;
+    return 0;
+}
+
 static enum windrow_status plan_within(const struct windrow_plan_options *options, const struct windrow_dump_paths *paths, const char *directory,
                                        struct windrow_meter *meter, struct windrow_plan *plan)
 {
@@ -350,8 +371,10 @@ static enum windrow_status plan_within(const struct windrow_plan_options *option
         goto out;
     plan_disk(plan, &trial);
     plan_time(plan, &trial, options->threads);
-    plan->vector_bytes = scaled(plan->core_pages, VECTOR_CORE_PAGE_BYTES);
+    plan->vector_bytes = (struct windrow_interval){vector_bytes(plan->pages.low, plan->core_pages.low), vector_bytes(plan->pages.point, plan->core_pages.point),
+                                                   vector_bytes(plan->pages.high, plan->core_pages.high)};
     plan->vectors_fit = plan->vector_bytes.high <= (double)options->memory_bytes;
+    plan->stripes = plan->vectors_fit ? 1 : stripes_for(plan, (double)options->memory_bytes);
 out:
     windrow_census_free(&census);
     windrow_places_close(places);
