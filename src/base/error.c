@@ -28,7 +28,8 @@ enum windrow_status windrow_fail_system(enum windrow_status status, int error_nu
     va_end(arguments);
     char reason[128];
     const char *reason_text = strerror_r(error_number, reason, sizeof reason);
-    snprintf(message, sizeof message, "%s: %s", text, reason_text);
+    bool full = error_number == ENOSPC || error_number == EDQUOT;
+    snprintf(message, sizeof message, "%s: %s%s", text, reason_text, full ? "; make room and run the same command again" : "");
     switch (error_number) {
     case ENOSPC: case EDQUOT: case ENOMEM: case EMFILE: case ENFILE: case EFBIG:
         return WINDROW_RESOURCE;
