@@ -571,6 +571,9 @@ static enum windrow_status solve(struct job *job, struct windrow_certificate *ce
 
 /* ---- Handing out --------------------------------------------------------------------------- */
 
+/* Ordering is no faster with more, and what it takes stands beside the vectors. */
+#define ORDER_MEMORY_MOST (UINT64_C(256) << 20)
+
 static void forget_generation(const struct job *job, uint64_t generation)
 {
     char *scores = windrow_path(job->directory, "scores-%llu.f64", (unsigned long long)generation);
@@ -602,6 +605,8 @@ static enum windrow_status publish(struct job *job, const struct windrow_certifi
     windrow_meter_stage(&job->meter, "ordering", "pages", 2 * pages);
     uint64_t kept = job->tiles ? store_bytes(job) + job->web.core_pages / job->tiles->stripes.count * sizeof(double) : needed_bytes(job);
     uint64_t memory = job->options->memory_bytes > kept ? job->options->memory_bytes - kept : 0;
+    if (memory > ORDER_MEMORY_MOST)
+        memory = ORDER_MEMORY_MOST;
     status = windrow_order_build(scores, WINDROW_SCORES_OFFSET, pages, memory > WINDROW_ORDER_MEMORY_LEAST ? memory : WINDROW_ORDER_MEMORY_LEAST,
                                  job->options->threads, order, &job->meter);
     windrow_meter_stage_end(&job->meter);
