@@ -16,6 +16,13 @@
 #include "../common/program.h"
 #include "../common/scratch.h"
 
+/* A sanitizer's own memory says nothing about ours. */
+#ifdef __SANITIZE_ADDRESS__
+#define PEAK_COUNTS false
+#else
+#define PEAK_COUNTS true
+#endif
+
 static uint64_t peak_of(const char *store)
 {
     struct outcome outcome = WINDROW("status", "--json", store);
@@ -38,7 +45,7 @@ static void test_many_links(void **state)
     char *from_little = memory_text("%s/crawlgen --links 20M | %s/windrow shard --quiet --memory 256M --out %s -", build, build, little);
     char *from_much = memory_text("%s/crawlgen --links 20M | %s/windrow shard --quiet --memory 4G --threads 3 --out %s -", build, build, much);
     MUST("bash", "-c", from_little);
-    assert_in_range(peak_of(little), 1, UINT64_C(320) << 20);
+    assert_true(peak_of(little) <= UINT64_C(320) << 20 || !PEAK_COUNTS);
     MUST("bash", "-c", from_much);
     scratch_expect_same_store(little, much);
     free(little);
@@ -64,7 +71,7 @@ static void test_many_hosts(void **state)
         }
     assert_int_equal(fclose(file), 0);
     MUST_WINDROW("shard", "--quiet", "--memory", "64M", "--out", store, dump);
-    assert_in_range(peak_of(store), 1, UINT64_C(128) << 20);
+    assert_true(peak_of(store) <= UINT64_C(128) << 20 || !PEAK_COUNTS);
     free(store);
     free(dump);
     scratch_remove(directory);
