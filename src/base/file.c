@@ -30,7 +30,6 @@ struct windrow_file_functions windrow_files = {
     .sync_data = fdatasync,
     .sync = fsync,
     .reserve = posix_fallocate,
-    .truncate = ftruncate,
     .rename = rename,
     .unlink = unlink,
     .make_directory = mkdir,
@@ -126,21 +125,6 @@ memory:
 enum windrow_status windrow_writer_open(struct windrow_writer *writer, const char *path, bool with_checksum)
 {
     return writer_start(writer, path, O_WRONLY | O_CREAT | O_TRUNC, with_checksum);
-}
-
-enum windrow_status windrow_writer_reopen(struct windrow_writer *writer, const char *path, uint64_t offset)
-{
-    enum windrow_status status = writer_start(writer, path, O_WRONLY | O_CREAT, false);
-    if (status)
-        return status;
-    if (windrow_files.truncate(writer->descriptor, (off_t)offset) ||
-        lseek(writer->descriptor, (off_t)offset, SEEK_SET) < 0) {
-        status = windrow_fail_system(WINDROW_RESOURCE, errno, "cannot cut %s at byte %llu", path, (unsigned long long)offset);
-        windrow_writer_abandon(writer);
-        return status;
-    }
-    writer->written_bytes = offset;
-    return WINDROW_OK;
 }
 
 static enum windrow_status writer_flush(struct windrow_writer *writer)

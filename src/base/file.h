@@ -31,7 +31,6 @@ struct windrow_file_functions {
     int (*sync_data)(int descriptor);
     int (*sync)(int descriptor);
     int (*reserve)(int descriptor, off_t offset, off_t bytes); /* returns an error number, like posix_fallocate */
-    int (*truncate)(int descriptor, off_t bytes);
     int (*rename)(const char *from, const char *to);
     int (*unlink)(const char *path);
     int (*make_directory)(const char *path, mode_t mode);
@@ -66,8 +65,6 @@ struct windrow_writer {
 /* Creates (or empties) the file `path`. With `with_checksum`, windrow_writer_finish() hands out the
  * XXH3-64 of all bytes. All zero is a closed writer, on which windrow_writer_abandon() does nothing. */
 enum windrow_status windrow_writer_open(struct windrow_writer *writer, const char *path, bool with_checksum);
-/* Opens an existing file to go on at `offset`; what lies behind it is cut off. No checksum. */
-enum windrow_status windrow_writer_reopen(struct windrow_writer *writer, const char *path, uint64_t offset);
 enum windrow_status windrow_writer_append(struct windrow_writer *writer, const void *data, size_t bytes);
 /* Flushes and syncs the data, leaving the writer open: the bytes so far are durable. */
 enum windrow_status windrow_writer_sync(struct windrow_writer *writer);

@@ -49,16 +49,6 @@ bool windrow_dump_rel_read(const char *field, size_t bytes, bool *nofollow)
     return true;
 }
 
-const char *windrow_dump_shape_name(enum windrow_dump_shape shape)
-{
-    switch (shape) {
-    case WINDROW_DUMP_PAIRS: return "pairs";
-    case WINDROW_DUMP_LISTS: return "lists";
-    case WINDROW_DUMP_IDS: return "ids";
-    default: return "auto";
-    }
-}
-
 /* Whole numbers, with white space around and between them. */
 static bool field_numeric(const char *field, size_t bytes)
 {

@@ -48,7 +48,4 @@ enum windrow_dump_shape windrow_dump_shape_recognise(const char *sample, size_t 
  */
 bool windrow_dump_rel_read(const char *field, size_t bytes, bool *nofollow);
 
-/* The shape's name in messages and options. */
-const char *windrow_dump_shape_name(enum windrow_dump_shape shape);
-
 #endif

@@ -63,7 +63,6 @@ static ssize_t write_nothing(int descriptor, const void *bytes, size_t count) { 
 static int open_failing(const char *path, int flags, mode_t mode) { return fails() ? -1 : honest.open(path, flags, mode); }
 static int close_failing(int descriptor) { int result = honest.close(descriptor); return fails() ? -1 : result; }
 static int sync_failing(int descriptor) { return fails() ? -1 : honest.sync(descriptor); }
-static int truncate_failing(int descriptor, off_t bytes) { return fails() ? -1 : honest.truncate(descriptor, bytes); }
 static int rename_failing(const char *from, const char *to) { return fails() ? -1 : honest.rename(from, to); }
 static int unlink_failing(const char *path) { return fails() ? -1 : honest.unlink(path); }
 static int make_directory_failing(const char *path, mode_t mode) { return fails() ? -1 : honest.make_directory(path, mode); }
@@ -160,14 +159,13 @@ static void test_writer(void **state)
     free(bytes);
 }
 
-static void test_writer_reopened(void **state)
+static void test_writer_synced(void **state)
 {
     (void)state;
     struct windrow_writer writer;
-    scratch_write_text(path, "keep this, not that");
-    assert_int_equal(windrow_writer_reopen(&writer, path, 9), WINDROW_OK);
-    assert_int_equal(writer.written_bytes, 9);
-    assert_int_equal(windrow_writer_append(&writer, "!", 1), WINDROW_OK);
+    scratch_write_text(path, "not this");
+    assert_int_equal(windrow_writer_open(&writer, path, false), WINDROW_OK);
+    assert_int_equal(windrow_writer_append(&writer, "keep this!", 10), WINDROW_OK);
     assert_int_equal(windrow_writer_sync(&writer), WINDROW_OK);
     char *text = scratch_read(path, NULL);
     assert_string_equal(text, "keep this!"); /* a sync flushes */
@@ -177,11 +175,6 @@ static void test_writer_reopened(void **state)
     text = scratch_read(path, NULL);
     assert_string_equal(text, "keep this!!");
     free(text);
-    windrow_files.truncate = truncate_failing;
-    trouble.calls_left = 0;
-    trouble.error_number = EIO;
-    assert_int_equal(windrow_writer_reopen(&writer, path, 3), WINDROW_RESOURCE);
-    expect_message(path);
 }
 
 /* The whole life of a writer, with one call of one kind failing. */
@@ -254,7 +247,7 @@ static void test_replace(void **state)
         windrow_files = (struct windrow_file_functions){
             .open = open_failing, .close = honest.close, .read = honest.read, .read_at = honest.read_at, .write = write_portion,
             .write_at = honest.write_at, .sync_data = sync_failing, .sync = sync_failing, .reserve = honest.reserve,
-            .truncate = honest.truncate, .rename = rename_failing, .unlink = honest.unlink, .make_directory = honest.make_directory};
+            .rename = rename_failing, .unlink = honest.unlink, .make_directory = honest.make_directory};
         trouble.calls_left = call;
         trouble.error_number = EIO;
         trouble.calls = 0;
@@ -434,7 +427,7 @@ int main(void)
 {
 #define TEST(name) cmocka_unit_test_setup_teardown(name, set_up, tear_down)
     const struct CMUnitTest tests[] = {
-        TEST(test_writer), TEST(test_writer_reopened), TEST(test_writer_failures), TEST(test_replace), TEST(test_load), TEST(test_read_and_write_at),
+        TEST(test_writer), TEST(test_writer_synced), TEST(test_writer_failures), TEST(test_replace), TEST(test_load), TEST(test_read_and_write_at),
         TEST(test_map), TEST(test_directories), TEST(test_directory_bytes), TEST(test_buffer), TEST(test_path),
     };
     return cmocka_run_group_tests_name("file", tests, NULL, NULL);

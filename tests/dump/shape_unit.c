@@ -99,15 +99,6 @@ static void rel_tokens_are_read(void **state)
     check_rel("http://a.example/", false, false);
 }
 
-static void shapes_have_names(void **state)
-{
-    (void)state;
-    assert_string_equal(windrow_dump_shape_name(WINDROW_DUMP_PAIRS), "pairs");
-    assert_string_equal(windrow_dump_shape_name(WINDROW_DUMP_LISTS), "lists");
-    assert_string_equal(windrow_dump_shape_name(WINDROW_DUMP_IDS), "ids");
-    assert_string_equal(windrow_dump_shape_name(WINDROW_DUMP_AUTO), "auto");
-}
-
 int main(void)
 {
     const struct CMUnitTest tests[] = {
@@ -118,7 +109,6 @@ int main(void)
         cmocka_unit_test(only_the_first_thousand_lines_count),
         cmocka_unit_test(last_field_of_a_cut_line_means_nothing),
         cmocka_unit_test(rel_tokens_are_read),
-        cmocka_unit_test(shapes_have_names),
     };
     return cmocka_run_group_tests(tests, NULL, NULL);
 }
